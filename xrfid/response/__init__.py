@@ -1,0 +1,1 @@
+"""How sample and instrument turn atoms into channels: tube, sample, scatter, detector, pile-up."""
