@@ -1,0 +1,1 @@
+"""From predicted columns to areas with their covariance: design, Poisson fit, refinement."""

@@ -1,0 +1,92 @@
+"""From a spectrum, an instrument and an estimate of the sample to the ingredients of a fit."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from xrfid.fit.design import SeriesColumns, hats, scatter_columns, scattered_continuum
+from xrfid.fit.grouping import Grouping
+from xrfid.fit.model import Ingredients
+from xrfid.fit.nuisance import Tolerances
+from xrfid.prepare.snip import continuum, smoothed
+from xrfid.response.detector import LineShape
+from xrfid.response.pileup import pair_spectrum
+from xrfid.response.series import Prediction
+from xrfid.spectrum import EnergyScale, Spectrum
+
+LOWEST_FITTED_KEV = 0.85
+KNOT_SPACING_FWHM = 8.0
+KNOT_LEAST_KEV = 0.8
+CURVATURE = 0.3
+USUAL_PULSE_PAIR_NS = 300.0
+
+
+@dataclass(frozen=True, eq=False)
+class Setting:
+    """Scale and line shape in force; they improve while the work goes on."""
+
+    scale: EnergyScale
+    shape: LineShape
+
+
+def fitted_channels(spectrum: Spectrum, scale: EnergyScale, end_kev: float) -> tuple[int, int]:
+    """First and last-plus-one channel worth fitting: above the threshold, up to a little over the end point."""
+    n = spectrum.n_channels
+    counts = spectrum.counts
+    first = int(np.clip(np.ceil(scale.channel(LOWEST_FITTED_KEV)), 0, n - 16))
+    last = int(np.clip(np.ceil(scale.channel(1.15 * end_kev)), first + 16, n))
+    filled = np.flatnonzero(counts[first:last] > 0)
+    if filled.size:
+        first += int(filled[0])
+    if last == n and n > 64 and counts[n - 1] > 5.0 * (counts[n - 8 : n - 1].max() + 3.0):
+        last = n - 1  # overflow counts pile up in the last channel
+    return first, last
+
+
+def ingredients(
+    spectrum: Spectrum, prediction: Prediction, fractions: NDArray[np.float64], setting: Setting,
+    tolerances: Tolerances,
+) -> Ingredients:  # fmt: skip
+    """Draw all columns for one estimate of the sample."""
+    first, last = fitted_channels(spectrum, setting.scale, prediction.source.end_kev)
+    grouping = Grouping.of(setting.scale, setting.shape.resolution, first, last)
+    columns = SeriesColumns(prediction, fractions, setting.shape, grouping)
+    counts = grouping.sum(spectrum.counts)
+    base = _continuum_base(spectrum, prediction, fractions, setting, grouping)
+    live = spectrum.live_time_s
+    pairs = grouping.sum(pair_spectrum(spectrum.counts, setting.scale))
+    stated = prediction.instrument.detector.pulse_pair_ns or USUAL_PULSE_PAIR_NS
+    if live:
+        pairs, pair_time = pairs * 1e-9 / live, (stated, stated)
+    else:
+        pairs, pair_time = pairs / max(spectrum.total_counts, 1.0), None
+    return Ingredients(
+        counts=counts,
+        columns=columns,
+        scatter=scatter_columns(prediction, fractions, setting.shape, grouping),
+        continuum=base * hats(grouping, setting.shape, KNOT_SPACING_FWHM, KNOT_LEAST_KEV),
+        curvature=CURVATURE,
+        pairs=pairs,
+        pair_time=pair_time,
+        partial=None,
+        tolerances=tolerances,
+    )
+
+
+def _continuum_base(
+    spectrum: Spectrum, prediction: Prediction, fractions: NDArray[np.float64], setting: Setting, grouping: Grouping
+) -> NDArray[np.float64]:
+    """The continuum's shape in counts: scattered braking radiation brought to the level SNIP finds."""
+    clipped = continuum(spectrum.counts, setting.scale, setting.shape.resolution)
+    level = np.maximum(grouping.sum(clipped), 0.0)
+    floor = 0.02 * np.diff(grouping.starts)
+    shape = scattered_continuum(prediction, fractions, setting.shape, grouping)
+    if not shape.any():
+        return np.asarray(np.maximum(smoothed(level, 9), floor))
+    # the ratio of the two, followed slowly, keeps the physical edges and takes the level from the data
+    window = max(grouping.n // 12, 5)
+    ratio = smoothed(level + floor, window) / smoothed(shape + 1e-6 * shape.max(), window)
+    return np.asarray(np.maximum(shape * smoothed(ratio, window), floor))
