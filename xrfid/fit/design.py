@@ -6,7 +6,7 @@ line shape and one grouping of the channels.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -18,6 +18,7 @@ from xrfid.fit.grouping import Grouping
 from xrfid.response.detector import DrawnLines, LineShape, draw, draw_core
 from xrfid.response.scatter import Scattered, compton_profile
 from xrfid.response.series import Prediction, SeriesKey
+from xrfid.spectrum import FWHM_PER_SIGMA
 
 SMALLEST_SHARE = 2e-4
 """Lines with a smaller share of their series are not drawn."""
@@ -158,7 +159,8 @@ def scatter_columns(
     """Columns of the source's scattered lines.
 
     Per series of the source: one coherent column and, for the incoherent peak, its Doppler profile,
-    a Gaussian of typical Doppler width, and a low-energy flank from multiple scatter.
+    a Gaussian of typical Doppler width (an angle spread makes the peak rounder than the profile), and
+    a low-energy flank from multiple scatter.
     """
     source = prediction.source
     scattered = prediction.scattered(fractions)
@@ -174,7 +176,7 @@ def scatter_columns(
         if not rows.size or scattered.coherent[rows].sum() <= 0:
             continue
         columns.append(_coherent(of, rows, names, scattered, shape, grouping))
-        columns.extend(_incoherent(of, rows, prediction, fractions, scattered, shape, grouping))
+        columns.extend(_incoherent(of, rows, names, prediction, fractions, scattered, shape, grouping))
     return columns
 
 
@@ -192,8 +194,9 @@ def _coherent(of: str, rows: NDArray[np.intp], names: list[str], scattered: Scat
                          float(scattered.coherent[rows].sum()), groups)  # fmt: skip
 
 
-def _incoherent(of: str, rows: NDArray[np.intp], prediction: Prediction, fractions: NDArray[np.float64],
-                scattered: Scattered, shape: LineShape, grouping: Grouping) -> list[ScatterColumn]:  # fmt: skip
+def _incoherent(of: str, rows: NDArray[np.intp], names: list[str], prediction: Prediction,
+                fractions: NDArray[np.float64], scattered: Scattered, shape: LineShape, grouping: Grouping
+                ) -> list[ScatterColumn]:  # fmt: skip
     total = float(scattered.incoherent[rows].sum())
     if total <= 0:
         return []
@@ -203,18 +206,27 @@ def _incoherent(of: str, rows: NDArray[np.intp], prediction: Prediction, fractio
     angle = prediction.instrument.geometry.scatter_deg
     low = max(0.75 * float(peak.min()) - 0.5, 0.3)
     grid = np.arange(low, 1.12 * float(peak.max()) + 0.3, _COMPTON_STEP_KEV)
-    doppler, flank = np.zeros(grid.size), np.zeros(grid.size)
-    for row, w, e in zip(rows, weight, peak, strict=True):
-        profile = w * compton_profile(fractions, float(scattered.coherent_kev[row]), angle, grid)
-        doppler += profile
-        flank += _lagged(profile, _MULTIPLE_DECAY * float(e))
-    gaussian = DrawnLines(peak, weight, np.zeros(rows.size, dtype=np.intp))
-    wide = _widened(gaussian, shape, grouping)
-    found = [ScatterColumn("incoherent scatter", of, strongest, _recorded(doppler, grid, shape, grouping), total, ()),
-             ScatterColumn("incoherent scatter", of, strongest, wide, 0.0, ())]  # fmt: skip
-    if strongest > 8.0:  # below, the flank merges with the continuum
-        found.append(ScatterColumn("incoherent scatter", of, strongest, _recorded(flank, grid, shape, grouping), 0.0, ()))
-    return found
+    kinds = list(dict.fromkeys(names))
+    shapes = {"doppler": [], "gaussian": [], "flank": []}  # type: dict[str, list[tuple[str, float, NDArray[np.float64]]]]
+    for kind in kinds:
+        on = [i for i, n in enumerate(names) if n == kind]
+        doppler, flank = np.zeros(grid.size), np.zeros(grid.size)
+        for i in on:
+            profile = weight[i] * compton_profile(fractions, float(scattered.coherent_kev[rows[i]]), angle, grid)
+            doppler += profile
+            flank += _lagged(profile, _MULTIPLE_DECAY * float(peak[i]))
+        share = float(weight[on].sum())
+        lines = DrawnLines(peak[on], weight[on] / share, np.zeros(len(on), dtype=np.intp))
+        shapes["doppler"].append((kind, share, _recorded(doppler, grid, shape, grouping) / share))
+        shapes["gaussian"].append((kind, share, _widened(lines, shape, grouping)))
+        shapes["flank"].append((kind, share, _recorded(flank, grid, shape, grouping) / share))
+    if strongest < 8.0:  # the flank merges with the continuum
+        del shapes["flank"]
+    return [
+        ScatterColumn("incoherent scatter", of, strongest, np.sum([g[1] * g[2] for g in groups], axis=0),
+                      total if name == "doppler" else 0.0, tuple(groups) if name == "gaussian" else ())
+        for name, groups in shapes.items()
+    ]  # fmt: skip
 
 
 def _lagged(profile: NDArray[np.float64], decay_kev: float) -> NDArray[np.float64]:
@@ -237,10 +249,6 @@ def _recorded(profile: NDArray[np.float64], grid: NDArray[np.float64], shape: Li
 
 def _widened(lines: DrawnLines, shape: LineShape, grouping: Grouping) -> NDArray[np.float64]:
     """Gaussian incoherent peaks of typical Doppler width."""
-    from dataclasses import replace
-
-    from xrfid.spectrum import FWHM_PER_SIGMA
-
     out = np.zeros(grouping.n)
     for e, w in zip(lines.energy_kev, lines.weight, strict=True):
         doppler_ev = FWHM_PER_SIGMA * _GAUSSIAN_DOPPLER * e * 1e3

@@ -29,6 +29,10 @@ _WORTH_A_COLUMN = 0.25
 """A tolerance whose full size would change the fit by less than this many sigma gets no column."""
 
 
+GAIN_PIVOT_KEV = 6.0
+"""Energy that a change of gain leaves where it is."""
+
+
 @dataclass(frozen=True, slots=True)
 class Tolerances:
     """Standard uncertainties of what all lines share.
@@ -105,10 +109,8 @@ def shared_nuisances(
     coherent = sum((a * c.column for c, a in scatter if c.kind == "coherent scatter"), np.zeros_like(core))
     slope = np.gradient((core + coherent), columns.grouping.centres_kev)
     found.append(Nuisance(("offset",), -slope, tolerances.offset_kev))
-    centre = 6.0
-    found.append(
-        Nuisance(("gain",), -slope * (columns.grouping.centres_kev - centre), tolerances.gain)
-    )
+    distance = columns.grouping.centres_kev - GAIN_PIVOT_KEV
+    found.append(Nuisance(("gain",), -slope * distance, tolerances.gain))
     wider = replace(shape.resolution, noise_ev=float(np.hypot(shape.resolution.noise_ev, 40.0)))
     second = (draw_core(lines, wider, edges, 1)[0] - core) / 40.0**2  # per eV^2 of FWHM^2
     mn = shape.resolution.fwhm_mn_ka_ev
@@ -148,7 +150,7 @@ def _tail_nuisances(
     )
     for i, fraction in enumerate(shape.shelf):
         if np.any(moved[i]):
-            found.append(Nuisance(("shelf", str(i)), moved[i], tolerances.shelf * fraction))
+            found.append(Nuisance(("shelf", str(i)), moved[i], tolerances.shelf * max(fraction, 0.001)))
     return found
 
 
@@ -174,8 +176,10 @@ def scatter_nuisances(scatter: list[tuple[ScatterColumn, float]], background: ND
         strongest = max((g[1] for g in column.groups), default=0.0)
         for name, share, drawn in column.groups:
             part = area * share * drawn
-            if share < strongest and float(np.sum(part**2 / np.maximum(background, 1.0))) > 4.0:
-                found.append(Nuisance(("scatter share", column.of, name), part, tolerances.scatter_share))
+            if share < strongest and float(np.sum(part**2 / np.maximum(background, 1.0))) > 1.0:
+                # how often a target's L1 shell is ionised is known worst of all
+                tolerance = 1.0 if name in ("Lb3", "Lg3") else tolerances.scatter_share
+                found.append(Nuisance(("scatter share", f"{column.kind} {column.of}", name), part, tolerance))
         if column.kind == "incoherent scatter":
             density = area * column.column / widths
             found.append(Nuisance(("compton shift", column.of), -np.gradient(density) * 1e-2, 3.0))  # 10 eV units

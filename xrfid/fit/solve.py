@@ -190,19 +190,20 @@ def _spd_solve(g: NDArray[np.float64], t: NDArray[np.float64]) -> NDArray[np.flo
 def _covariance(gram: NDArray[np.float64], free: NDArray[np.bool_]) -> NDArray[np.float64]:
     """Inverse information of the free coefficients, zero elsewhere."""
     index = np.flatnonzero(free)
-    scale = 1.0 / np.sqrt(np.maximum(np.diag(gram)[index], 1e-300))
-    g = gram[np.ix_(index, index)] * scale[:, None] * scale
-    inverse = _spd_solve_many(g)
     out = np.zeros_like(gram)
-    out[np.ix_(index, index)] = inverse * scale[:, None] * scale
+    out[np.ix_(index, index)] = covariance_of(gram[np.ix_(index, index)])
     return out
 
 
-def _spd_solve_many(g: NDArray[np.float64]) -> NDArray[np.float64]:
+def covariance_of(gram: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Inverse of an information matrix, scaled to unit diagonal first."""
+    scale = 1.0 / np.sqrt(np.maximum(np.diag(gram), 1e-300))
+    g = gram * scale[:, None] * scale
+    eye = np.eye(g.shape[0])
     for ridge in (1e-12, 1e-9, 1e-6):
         try:
-            eye = np.eye(g.shape[0])
-            return np.asarray(cho_solve(cho_factor(g + ridge * eye, check_finite=False), eye))
+            inverse = cho_solve(cho_factor(g + ridge * eye, check_finite=False), eye)
+            return np.asarray(inverse * scale[:, None] * scale)
         except LinAlgError:
             continue
-    return np.asarray(np.linalg.pinv(g, rcond=1e-10))
+    return np.asarray(np.linalg.pinv(g, rcond=1e-10) * scale[:, None] * scale)

@@ -8,9 +8,10 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from xrfid.fit.model import Fit, Ingredients, fit_series
+from xrfid.atoms.lines import GROUP_INDEX, GROUPS
+from xrfid.fit.model import Fit, FreePeak, Ingredients, fit_series
 from xrfid.identify.result import Evidence, LineEvidence, Rival
-from xrfid.identify.select import draw_peak, local_misfit, score
+from xrfid.identify.select import PEAK_WIDTHS, draw_peak, local_misfit, score
 from xrfid.response.series import SeriesKey
 
 _VISIBLE = 3.5
@@ -58,7 +59,8 @@ def _misfit_at(ingredients: Ingredients, fit: Fit, keys: Sequence[SeriesKey]) ->
     misfit = local_misfit(fit, ingredients.counts)
     column = sum(fit.areas[k] * ingredients.columns.unit[ingredients.columns.index(k)] for k in keys)
     weight = np.asarray(column) ** 2 / fit.variance
-    return float(np.sum(weight * misfit) / max(float(np.sum(weight)), 1e-300))
+    total = float(np.sum(weight))
+    return float(np.sum(weight * misfit) / total) if total > 0 else 1.0
 
 
 def _lines(ingredients: Ingredients, fit: Fit, key: SeriesKey) -> list[LineEvidence]:
@@ -84,12 +86,10 @@ def _lines(ingredients: Ingredients, fit: Fit, key: SeriesKey) -> list[LineEvide
 
 def _missing(line: LineEvidence) -> bool:
     """Whether a line that must show itself does not."""
-    tolerance = 0.3 * line.predicted
+    known_to = max(GROUPS[GROUP_INDEX[line.group]].tolerance, 0.15)
     short = line.predicted - line.observed
-    return (
-        line.predicted > _VISIBLE * line.sigma
-        and line.observed < 0.5 * line.predicted
-        and short > _VISIBLE * float(np.hypot(line.sigma, tolerance if line.predicted > 0 else 0.0))
+    return line.observed < 0.5 * line.predicted and short > _VISIBLE * float(
+        np.hypot(line.sigma, known_to * line.predicted)
     )
 
 
@@ -99,7 +99,7 @@ def _rivals(
 ) -> tuple[Rival, ...]:  # fmt: skip
     """Other explanations of the counts that `keys` explain, the best first."""
     columns = ingredients.columns
-    pool = [k for k in candidates if k.z != keys[0].z and k not in without.areas]
+    pool = [k for k in candidates if k in columns and k.z != keys[0].z and k not in without.areas]
     unit = columns.unit[[columns.index(k) for k in pool]]
     variance = np.maximum(without.variance, fit.variance)
     z = score(without, unit, ingredients.counts, variance).z if pool else np.empty(0)
@@ -120,22 +120,28 @@ def _share_channels(column: NDArray[np.float64], mine: NDArray[np.float64], vari
     return bool(np.max(cosines) > 0.3)
 
 
-def free_peak_rival(ingredients: Ingredients, fit: Fit, without: Fit, keys: Sequence[SeriesKey]) -> Rival | None:
-    """Try one peak of free position in place of the element's strongest line group.
+def free_peak_instead(ingredients: Ingredients, without: Fit, keys: Sequence[SeriesKey]) -> tuple[FreePeak, float]:
+    """One peak of free position and width in place of the element's strongest line group.
 
     Returns
     -------
-    Rival or None
-        None if no such peak comes near.
+    peak : FreePeak
+    gain : float
+        Deviance that the peak gains over the fit without the element.
     """
-    key = max(keys, key=lambda k: fit.areas[k])
-    group = max(ingredients.groups(key), key=lambda g: g.share)
-    grouping, resolution = ingredients.columns.grouping, ingredients.columns.shape.resolution
-    width = float(resolution.fwhm_kev(group.energy_kev))
-    energies = group.energy_kev + width * np.linspace(-0.8, 0.8, 17)
-    trials = [(e, w) for e in energies for w in (1.0, 1.5)]
-    drawn = np.array([draw_peak(e, w, resolution, grouping) for e, w in trials])
-    z = score(without, drawn, ingredients.counts, np.maximum(without.variance, fit.variance)).z
-    best = int(np.argmax(z))
-    loss = without.objective - fit.objective
-    return Rival(f"an unassigned peak at {trials[best][0]:.3f} keV", "peak", float(loss - max(z[best], 0.0) ** 2))
+    columns = ingredients.columns
+    grouping, resolution = columns.grouping, columns.shape.resolution
+    best: tuple[float, FreePeak] | None = None
+    for key in keys:
+        group = max(ingredients.groups(key), key=lambda g: g.share)
+        width = float(resolution.fwhm_kev(group.energy_kev))
+        trials = [
+            (float(e), w) for e in group.energy_kev + width * np.linspace(-1.0, 1.0, 21) for w in PEAK_WIDTHS
+        ]
+        drawn = np.array([draw_peak(e, w, resolution, grouping) for e, w in trials])
+        z = score(without, drawn, ingredients.counts, np.maximum(without.variance, ingredients.counts)).z
+        i = int(np.argmax(z))
+        if best is None or z[i] > best[0]:
+            best = (float(z[i]), FreePeak(*trials[i], drawn[i]))
+    assert best is not None
+    return best[1], max(best[0], 0.0) ** 2

@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from xrfid.spectrum import EnergyScale, Resolution
+from xrfid.prepare.calibration import Calibration
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -144,26 +144,6 @@ class Unexplained:
     energy_kev: float
     area: float
     sigma: float
-
-
-@dataclass(frozen=True, slots=True)
-class Calibration:
-    """The energy scale and resolution used, where they come from, and how well the lines agree."""
-
-    scale: EnergyScale
-    resolution: Resolution
-    origin: str
-    rms_ev: float
-    note: str = ""
-    offset_sigma_kev: float = 0.0
-    gain_sigma_kev: float = 0.0
-    residuals: tuple[tuple[str, float, float, float], ...] = ()
-    """Per line group used: its name, energy (keV), residual (eV), its standard uncertainty (eV)."""
-    stated: EnergyScale | None = None
-    """The scale that the file stated, when it was not used as it stands."""
-    runner_up: EnergyScale | None = None
-    lead: float | None = None
-    """How far ahead of the runner-up, in deviance, when the scale was found."""
 
 
 @dataclass(frozen=True, slots=True)

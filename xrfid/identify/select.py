@@ -195,8 +195,8 @@ def significances(ingredients: Ingredients, fit: Fit) -> dict[SeriesKey, float]:
     return out
 
 
-_PEAK_WIDTHS = (1.0, 1.5)
-_PEAK_MARGIN = 0.01
+PEAK_WIDTHS = (1.0, 1.5)
+_PEAK_MARGIN = 0.05
 """A free peak must hold at least this share of the line counts around it, else it is shape misfit."""
 
 
@@ -211,19 +211,34 @@ def free_peaks(ingredients: Ingredients, fit: Fit, enter: float, most: int = 6) 
     for _ in range(most):
         residual = ingredients.counts - fit.model
         best: tuple[float, FreePeak] | None = None
-        for width in _PEAK_WIDTHS:
+        for width in PEAK_WIDTHS:
             energy = _strongest_residual(residual, fit.variance, grouping, resolution, width)
             peak = FreePeak(energy, width, draw_peak(energy, width, resolution, grouping))
             scored = score(fit, peak.column[None], ingredients.counts, np.maximum(fit.variance, 1.0))
-            around = float(np.sum(peak.column * fit.part("series"))) / float(np.sum(peak.column**2))
-            ok = scored.amplitude[0] > _PEAK_MARGIN * around
-            if ok and (best is None or scored.z[0] > best[0]):
+            known = _on_a_known_line(ingredients, fit, peak, float(scored.amplitude[0]))
+            if not known and (best is None or scored.z[0] > best[0]):
                 best = (float(scored.z[0]), peak)
         if best is None or best[0] < enter:
             break
         found.append(best[1])
         fit = fit_series(ingredients.with_peaks(tuple(found)), fit.keys, fit, rounds=1, iterations=3)
     return tuple(found)
+
+
+def _on_a_known_line(ingredients: Ingredients, fit: Fit, peak: FreePeak, amplitude: float) -> bool:
+    """Whether a peak only adds to a line that the fit holds, or sits in the wing of a much stronger one.
+
+    What is off there is the line's share, energy or shape, and the tolerances are the place for it.
+    """
+    beside = float(np.sum(peak.column * fit.part("series"))) / float(np.sum(peak.column**2))
+    if amplitude < _PEAK_MARGIN * beside:
+        return True
+    width = float(ingredients.columns.shape.resolution.fwhm_kev(peak.energy_kev))
+    return any(
+        abs(group.energy_kev - peak.energy_kev) < 0.6 * width and amplitude < 3.0 * fit.areas[key] * group.share
+        for key in fit.keys if fit.areas[key] > 30.0
+        for group in ingredients.groups(key)
+    )  # fmt: skip
 
 
 def draw_peak(energy_kev: float, width: float, resolution: Resolution, grouping: Grouping) -> NDArray[np.float64]:

@@ -213,10 +213,9 @@ def _tail_table(slope: float) -> tuple[NDArray[np.float64], NDArray[np.float64]]
     u = np.linspace(-_REACH_SIGMA - 9.0 * slope, _REACH_SIGMA, 4000)
     k = 1.0 / slope
     # exp(u k + k^2/2) * ndtr(-u - k), written with erfcx so that nothing overflows
-    folded = 0.5 * np.exp(-0.5 * u**2) * erfcx((u + k) / math.sqrt(2.0))
-    far = u < -8.0
-    folded[far] = np.exp(u[far] * k + 0.5 * k**2)
-    return u, ndtr(u) + folded
+    near = np.maximum(u, -8.0)
+    folded = 0.5 * np.exp(-0.5 * near**2) * erfcx((near + k) / math.sqrt(2.0))
+    return u, ndtr(u) + np.where(u < -8.0, np.exp(u * k + 0.5 * k**2), folded)
 
 
 def _scatter(lines, sigma, below, above, edges_kev, n_columns, cdf):  # type: ignore[no-untyped-def]

@@ -1,0 +1,134 @@
+"""The whole job on one screen: from a spectrum and an instrument to an `Identification`."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from xrfid.fit.composition import Composition, estimate
+from xrfid.fit.model import Fit, Ingredients, fit_series
+from xrfid.fit.nuisance import Tolerances
+from xrfid.fit.refine import refined
+from xrfid.fit.setup import Setting, ingredients
+from xrfid.identify.challenge import unmask_peaks
+from xrfid.identify.report_parts import assemble
+from xrfid.identify.result import Calibration, Identification
+from xrfid.identify.select import backward, forward, free_peaks
+from xrfid.identify.settings import Settings
+from xrfid.instrument import Instrument
+from xrfid.prepare.establish import establish
+from xrfid.response.detector import LineShape
+from xrfid.response.series import Prediction, SeriesKey
+from xrfid.spectrum import Spectrum
+
+_FIRST_PASS = 12.0
+"""Significance for the first pass, which only has to find what shapes the spectrum."""
+_PEAK_SIGNIFICANCE = 6.0
+_SCATTER_FROM_KEV = 5.0
+
+
+@dataclass(frozen=True, eq=False)
+class Work:
+    """Everything that one identification has found so far; each step returns a new one."""
+
+    spectrum: Spectrum
+    instrument: Instrument
+    settings: Settings
+    calibration: Calibration
+    prediction: Prediction
+    setting: Setting
+    composition: Composition
+    ingredients: Ingredients
+    fit: Fit
+    candidates: tuple[SeriesKey, ...]
+    threshold: float
+
+    @property
+    def fixed(self) -> tuple[SeriesKey, ...]:
+        """Series that are in the model whatever the counts say."""
+        return _fixed(self.ingredients, self.instrument, self.settings)
+
+
+def identify(spectrum: Spectrum, instrument: Instrument | None = None, settings: Settings | None = None) -> Identification:
+    """Say which elements a spectrum shows, how strongly, how sure that is, and why.
+
+    Parameters
+    ----------
+    spectrum : Spectrum
+    instrument : Instrument, optional
+        What is known of the instrument; documented defaults otherwise.
+    settings : Settings, optional
+
+    Returns
+    -------
+    Identification
+
+    Raises
+    ------
+    Untrustworthy
+        If the spectrum does not allow a trustworthy answer, e.g. because its energy scale is unknown.
+    InputError
+        If the instrument's description makes no sense.
+    """
+    return assemble(search(spectrum, instrument or Instrument(), settings or Settings()))
+
+
+def search(spectrum: Spectrum, instrument: Instrument, settings: Settings) -> Work:
+    """Find the series that belong in the model: strong ones, composition, all, composition, all again."""
+    calibration, end_kev = establish(spectrum, instrument)
+    prediction = Prediction(instrument, end_kev)
+    shape = LineShape.of(instrument.detector).with_resolution(calibration.resolution)
+    setting = Setting(calibration.scale, shape)
+    candidates = tuple(k for k in prediction.keys if settings.allows(k) and k.element != prediction.source.anode)
+    threshold = settings.threshold(len({k.z for k in candidates}))
+    fractions = prediction.light_matrix_only()
+    kept: tuple[SeriesKey, ...] = ()
+    for enter, known in ((_FIRST_PASS, False), (threshold, True), (threshold, True)):
+        if kept:
+            setting = refined(setting, fit)
+        drawn = ingredients(spectrum, prediction, fractions, setting, Tolerances(matrix_known=known))
+        drawn, fit = _select(drawn, kept, candidates, instrument, settings, enter, thorough=known)
+        composition = _composition(prediction, drawn, fit)
+        fractions = composition.fractions
+        kept = fit.keys
+    return Work(spectrum, instrument, settings, calibration, prediction, setting, composition, drawn, fit, candidates,
+                threshold)  # fmt: skip
+
+
+def _select(
+    drawn: Ingredients, kept: tuple[SeriesKey, ...], candidates: tuple[SeriesKey, ...], instrument: Instrument,
+    settings: Settings, enter: float, thorough: bool,
+) -> tuple[Ingredients, Fit]:  # fmt: skip
+    """One pass of selection; a thorough one also looks for peaks that no line explains."""
+    fixed = _fixed(drawn, instrument, settings)
+    start = (*fixed, *(k for k in kept if k in drawn.columns and k not in fixed))
+    fit = forward(drawn, start, candidates, enter, handicap=settings.handicap)
+    fit = backward(drawn, fit, fixed, enter)
+    if thorough:
+        peaks = free_peaks(drawn, fit, _PEAK_SIGNIFICANCE)
+        if peaks:
+            drawn = drawn.with_peaks(peaks)
+            fit = backward(drawn, fit_series(drawn, fit.keys, fit, rounds=1), fixed, enter)
+        drawn, fit = unmask_peaks(drawn, fit, fixed)
+    return drawn, fit
+
+
+def _fixed(drawn: Ingredients, instrument: Instrument, settings: Settings) -> tuple[SeriesKey, ...]:
+    """Argon of the air, stray elements and elements known to be present."""
+    names = set(settings.present) | set(instrument.stray.elements)
+    air = instrument.path.atmosphere == "air" and "Ar" not in settings.absent
+    return tuple(
+        k for k in drawn.columns.keys if (k.element in names or (air and k.element == "Ar" and k.series == "K"))
+    )
+
+
+def _composition(prediction: Prediction, drawn: Ingredients, fit: Fit) -> Composition:
+    """Rough composition from the areas and the scattered radiation."""
+    window = (_SCATTER_FROM_KEV, 0.95 * prediction.source.end_kev)
+    centres = drawn.columns.grouping.centres_kev
+    inside: NDArray[np.bool_] = (centres > window[0]) & (centres < window[1])
+    scattered = float(fit.part("scatter", "continuum")[inside].sum())
+    areas = {k: fit.areas[k] for k in fit.keys if k.element != "Ar"}
+    return estimate(prediction, areas, fit.sigmas, scattered, window)
