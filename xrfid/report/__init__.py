@@ -1,0 +1,1 @@
+"""Showing a result: terminal table, JSON document, figures and the page to hand over."""

@@ -21,7 +21,6 @@ import numpy as np
 from xrfid.errors import InputError
 from xrfid.identify.result import (
     Artefact,
-    Calibration,
     Curves,
     Finding,
     Identification,
@@ -29,6 +28,7 @@ from xrfid.identify.result import (
     Source,
     Unexplained,
 )
+from xrfid.prepare.calibration import Calibration
 from xrfid.spectrum import EnergyScale, Resolution
 
 SCHEMA = "xrfid.identification/1"
@@ -129,7 +129,7 @@ def _plain(value: Any) -> Any:
 
 
 def _calibration(used: Calibration) -> dict[str, Any]:
-    """The calibration with its coefficients laid flat, as the contract has them."""
+    """Lay the coefficients of the calibration flat, as scripts outside rely on them."""
     names = ("line", "energy_kev", "residual_ev", "sigma_ev")
     return {
         **_plain(used.scale),
@@ -149,7 +149,7 @@ def _calibration(used: Calibration) -> dict[str, Any]:
 
 def _calibration_back(plain: Mapping[str, Any], source: str) -> Calibration:
     read = _Reader(plain, f"{source}, calibration")
-    rows = read("residuals", tuple[dict[str, Any], ...])
+    rows, row_type = read("residuals", tuple[dict[str, Any], ...]), tuple[str, float, float, float]
     return Calibration(
         scale=_build(EnergyScale, plain, read.where),
         resolution=read("resolution", Resolution),
@@ -158,7 +158,7 @@ def _calibration_back(plain: Mapping[str, Any], source: str) -> Calibration:
         note=read("note", str),
         offset_sigma_kev=read("offset_sigma_kev", float),
         gain_sigma_kev=read("gain_sigma_kev", float),
-        residuals=tuple(_build(tuple[str, float, float, float], list(row.values()), read.where) for row in rows),
+        residuals=tuple(_build(row_type, list(row.values()), read.where) for row in rows),
         stated=read("stated", EnergyScale | None),
         runner_up=read("runner_up", EnergyScale | None),
         lead=read("lead", float | None),
@@ -186,7 +186,11 @@ def _build(kind: Any, value: Any, where: str) -> Any:
     if is_dataclass(kind):
         hints = typing.get_type_hints(kind)
         read = _Reader(_expect(value, Mapping, where), where)
-        return typing.cast("type[Any]", kind)(**{f.name: read(f.name, hints[f.name]) for f in fields(kind)})
+        values = {f.name: read(f.name, hints[f.name]) for f in fields(kind)}
+        try:
+            return typing.cast("type[Any]", kind)(**values)
+        except ValueError as error:
+            raise InputError(where, str(error)) from error
     if origin is tuple:
         items = _expect(value, list, where)
         each = [arguments[0]] * len(items) if arguments[-1] is Ellipsis else list(arguments)
@@ -194,7 +198,8 @@ def _build(kind: Any, value: Any, where: str) -> Any:
             raise InputError(where, f"{len(items)} values where {len(each)} belong")
         return tuple(_build(k, v, f"{where}[{i}]") for i, (k, v) in enumerate(zip(each, items, strict=True)))
     if origin is dict:
-        return {k: _build(arguments[1], v, f"{where}, {k}") for k, v in _expect(value, Mapping, where).items()}
+        items = _expect(value, Mapping, where).items()
+        return {key: _build(arguments[1], item, f"{where}, {key}") for key, item in items}
     if isinstance(kind, type) and issubclass(kind, Enum):
         if value not in [member.value for member in kind]:
             raise InputError(where, f"{value!r} is none of {', '.join(m.value for m in kind)}")
@@ -207,6 +212,6 @@ def _build(kind: Any, value: Any, where: str) -> Any:
 def _expect(value: Any, kind: Any, where: str) -> Any:
     """Return `value` if it is of `kind`."""
     if not isinstance(value, kind) or isinstance(value, bool):
-        wanted = {Mapping: "a table", list: "a list", str: "text", int: "a whole number"}.get(kind, "a number")
-        raise InputError(where, f"{value!r} is not {wanted}")
+        names = {Mapping: "a table", list: "a list", str: "text", int: "a whole number"}
+        raise InputError(where, f"{value!r} is not {names.get(kind, 'a number')}")
     return value

@@ -17,6 +17,8 @@ if TYPE_CHECKING:
     from rich.text import Text
 
 _ASCII = str.maketrans({"±": "+-", "–": "-", "●": "#", "…": "~", "⚠": "!"})
+_ONE_RULE = "    \n    \n {}  \n    \n    \n    \n    \n    \n"
+"""rich's drawing of a table with one line under its header and none elsewhere."""
 _OPEN = (Verdict.TENTATIVE, Verdict.UNRESOLVED)
 
 
@@ -59,7 +61,7 @@ def render_comparison(identifications: Sequence[Identification], console: Consol
             marks = [writer.mark(verdicts.get(e, Verdict.NOT_DETECTED)) for e in block]
             table.add_row(writer.text(_shortened(name, widest)), *marks)
         console.print(table)
-    writer.line("● identified   ? tentative or unresolved   i from the instrument   blank: not seen", style="dim")
+    writer.line("● identified, ? tentative or unresolved, i from the instrument, blank not seen", style="dim")
 
 
 def shown_elements(identifications: Iterable[Identification]) -> list[str]:
@@ -84,7 +86,8 @@ def hazardous_limits(identification: Identification) -> tuple[dict[str, list[Lim
     for limit in identification.limits:
         by_element.setdefault(limit.element, []).append(limit)
     seen: dict[str, list[Limit]] = {}
-    out_of_reach, unasked = [], []
+    out_of_reach: list[str] = []
+    unasked: list[str] = []
     for element in sorted(set(HAZARDOUS) - found, key=HAZARDOUS.index):
         own = by_element.get(element, [])
         usable = [x for x in own if x.verdict is Verdict.NOT_DETECTED and x.detection_limit is not None]
@@ -110,6 +113,12 @@ class _Writer:
             flat = flat.translate(_ASCII).encode("ascii", "backslashreplace").decode("ascii")
         return Text(flat, style=style)
 
+    def stacked(self, lines: Sequence[str]) -> Text:
+        """Several short lines in one cell."""
+        from rich.text import Text
+
+        return Text("\n").join([self.text(line) for line in lines])
+
     def line(self, content: str, style: str = "") -> None:
         self.console.print(self.text(content, style))
 
@@ -124,9 +133,17 @@ class _Writer:
         from rich.box import Box
         from rich.table import Table
 
-        rule = "    \n    \n ─  \n    \n    \n    \n    \n    \n" if self.fancy else "    \n    \n -  \n    \n    \n    \n    \n    \n"
-        return Table(box=Box(rule, ascii=not self.fancy), show_header=header, header_style="dim", show_edge=False,
-                     pad_edge=False, padding=(0, 1, 0, 0), collapse_padding=True)  # fmt: skip
+        dash = "─" if self.fancy else "-"
+        box = Box(_ONE_RULE.format(dash), ascii=True)
+        return Table(
+            box=box,
+            show_header=header,
+            header_style="dim",
+            show_edge=False,
+            pad_edge=False,
+            padding=(0, 1, 0, 0),
+            collapse_padding=True,
+        )
 
     def bullets(self, title: str, items: Sequence[str], style: str = "") -> None:
         """Print a heading and one paragraph an item, indented behind its dash."""
@@ -144,7 +161,7 @@ class _Writer:
 def _head(identification: Identification, writer: _Writer) -> None:
     title = identification.source.title
     name = wording.subject(identification)
-    writer.line(name if not title or title == name else f"{name}  {title}", style="bold")
+    writer.line(name if not title or title == name else f"{name} – {title}", style="bold")
     writer.line(wording.source_line(identification))
     writer.line(wording.scale_line(identification))
     if identification.calibration.note:
@@ -160,7 +177,8 @@ def _identified(identification: Identification, writer: _Writer) -> None:
     _findings_table(sure, writer)
     asked = max((f.evidence.threshold for f in sure), default=0.0)
     writer.line(
-        f"Sigma: how many standard deviations the fit is worse without the element; {asked:.1f} are asked for "
+        "Sigma: how many standard deviations the fit is worse without the element; "
+        f"{asked:.1f} are asked for "
         f"({identification.false_identification_level:g} false elements expected a spectrum).",
         style="dim",
     )
@@ -169,25 +187,19 @@ def _identified(identification: Identification, writer: _Writer) -> None:
 def _findings_table(findings: Sequence[Finding], writer: _Writer) -> None:
     table = writer.table()
     table.add_column("Element", no_wrap=True, min_width=7)
+    table.add_column("Lines", no_wrap=True)
     table.add_column("Net counts", no_wrap=True, justify="right")
     table.add_column("Sigma", no_wrap=True, justify="right")
     table.add_column("Why", overflow="fold")
     for finding in findings:
-        series = writer.text(" ")
-        series = writer.text("").join([writer.text(wording.series_line(s)) for s in finding.series])
-        if len(finding.series) > 1:
-            series = _stacked([wording.series_line(s) for s in finding.series], writer)
-        why = " ".join(filter(None, [finding.reason, wording.rivals_line(finding)]))
-        table.add_row(writer.text(finding.element, "bold"), series,
-                      writer.text(wording.significance(finding.evidence.significance)), writer.text(why))  # fmt: skip
+        table.add_row(
+            writer.text(finding.element, "bold"),
+            writer.stacked([s.series for s in finding.series]),
+            writer.stacked([wording.with_sigma(s.area, s.sigma) for s in finding.series]),
+            writer.text(wording.significance(finding.evidence.significance)),
+            writer.text(" ".join(filter(None, [finding.reason, wording.rivals_line(finding)]))),
+        )
     writer.console.print(table)
-
-
-def _stacked(lines: Sequence[str], writer: _Writer) -> Text:
-    """Several short lines in one cell."""
-    from rich.text import Text
-
-    return Text("\n").join([writer.text(line) for line in lines])
 
 
 def _open_findings(identification: Identification, writer: _Writer) -> None:
@@ -211,12 +223,14 @@ def _other_peaks(identification: Identification, writer: _Writer) -> None:
     if identification.artefacts:
         writer.heading("Peaks that are no line of the sample")
         table = writer.table()
-        for name, justify in (("keV", "right"), ("Counts", "right"), ("What", "left")):
-            table.add_column(name, justify=justify, no_wrap=name != "What")  # type: ignore[arg-type]
+        table.add_column("keV", justify="right", no_wrap=True)
+        table.add_column("Counts", justify="right", no_wrap=True)
+        table.add_column("What", overflow="fold")
         for peak in identification.artefacts:
             what = f"{peak.kind}: {peak.of}" if peak.of else str(peak.kind)
             said = f"{what} ({peak.advice})" if peak.advice else what
-            table.add_row(f"{peak.energy_kev:.2f}", writer.text(wording.with_sigma(peak.area, peak.sigma)), writer.text(said))
+            counts = wording.with_sigma(peak.area, peak.sigma)
+            table.add_row(f"{peak.energy_kev:.2f}", writer.text(counts), writer.text(said))
         writer.console.print(table)
     writer.bullets(
         "Unexplained",
@@ -239,10 +253,12 @@ def _not_seen(identification: Identification, writer: _Writer) -> None:
         lines.append("not looked for, no statement: " + ", ".join(unasked))
     others = {x.element for x in identification.limits if x.verdict is Verdict.NOT_DETECTED} - set(seen)
     if others:
-        lines.append(f"{len(others)} further elements looked for and not detected; --json and --page list their limits")
+        lines.append(
+            f"{len(others)} further elements looked for and not detected; --json and --page list their limits"
+        )
     writer.bullets("Harmful elements not found" if seen else "Harmful elements", lines)
 
 
 def _shortened(name: str, width: int) -> str:
-    """The end of a long path says more than its beginning."""
+    # the end of a long path says more than its beginning
     return name if len(name) <= width else "…" + name[-(width - 1) :]

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 
-from xrfid.identify.result import Finding, Identification, SeriesResult, Verdict
+from xrfid.identify.result import Finding, Identification, Verdict
 
 GROUP_SPACE = "\N{NARROW NO-BREAK SPACE}"
 
@@ -78,22 +78,22 @@ def source_line(identification: Identification, space: str = " ") -> str:
     )
 
 
-_ORIGINS = {"file": "as the file states it", "found": "found from the spectrum's own lines", "instrument": "from the instrument file"}
+_ORIGINS = {
+    "file": "as the file states it",
+    "found": "found from the spectrum's own lines",
+    "instrument": "from the instrument file",
+}
 
 
 def scale_line(identification: Identification) -> str:
     """Return where the energy scale comes from and how well it holds, in one sentence."""
     used = identification.calibration
-    agree = f"; lines agree within {used.rms_ev:.1f} eV" if math.isfinite(used.rms_ev) and used.residuals else ""
+    checked = math.isfinite(used.rms_ev) and len(used.residuals) > 0
+    agree = f"; lines agree within {used.rms_ev:.1f} eV" if checked else ""
     return (
         f"Energy scale {_ORIGINS.get(used.origin, used.origin)}{agree}. "
         f"Resolution {used.resolution.fwhm_mn_ka_ev:.0f} eV at 5.9 keV."
     )
-
-
-def series_line(series: SeriesResult, space: str = " ") -> str:
-    """Return ``K 812 340 ± 950``."""
-    return f"{series.series} {with_sigma(series.area, series.sigma, space)}"
 
 
 def rivals_line(finding: Finding) -> str:
