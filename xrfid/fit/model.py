@@ -9,7 +9,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xrfid.fit.design import GroupColumn, ScatterColumn, SeriesColumns
-from xrfid.fit.nuisance import Nuisance, Tolerances, group_nuisances, scatter_nuisances, shared_nuisances
+from xrfid.fit.nuisance import (
+    Nuisance,
+    Tolerances,
+    group_nuisances,
+    scatter_nuisances,
+    shared_nuisances,
+    sum_nuisance,
+)
 from xrfid.fit.solve import LinearProblem, Solution, solve
 from xrfid.response.series import SeriesKey
 
@@ -142,13 +149,14 @@ def fit_series(ingredients: Ingredients, keys: Sequence[SeriesKey], near: Fit | 
     """
     keys = tuple(keys)
     areas: dict[SeriesKey, float] = {} if near is None else {k: near.areas.get(k, 0.0) for k in keys}
-    scatter = [0.0] * len(ingredients.scatter)
+    scatter, pair_time = [0.0] * len(ingredients.scatter), 0.0
     if near is not None:
+        pair_time = near.coefficient("sum")
         scatter = [near.coefficient("scatter", str(i)) for i in range(len(scatter))]
     model = None if near is None else near.model
     done: Fit | None = None
     for _ in range(rounds):
-        problem, labels, functionals = _assemble(ingredients, keys, areas, scatter, model)
+        problem, labels, functionals = _assemble(ingredients, keys, areas, scatter, pair_time, model)
         lines = ingredients.counts if model is None else model
         inflation = 1.0 + MODEL_PRECISION**2 * lines
         solution = solve(problem, ingredients.counts, model, inflation=inflation, iterations=iterations)
@@ -158,6 +166,7 @@ def fit_series(ingredients: Ingredients, keys: Sequence[SeriesKey], near: Fit | 
         done = Fit(keys, areas, dict(zip(keys, map(float, spread), strict=True)), solution, problem, labels,
                    functionals, solution.model * inflation)  # fmt: skip
         scatter = [done.coefficient("scatter", str(i)) for i in range(len(scatter))]
+        pair_time = done.coefficient("sum")
         model = solution.model
     assert done is not None
     return done
@@ -165,7 +174,7 @@ def fit_series(ingredients: Ingredients, keys: Sequence[SeriesKey], near: Fit | 
 
 def _assemble(
     ingredients: Ingredients, keys: tuple[SeriesKey, ...], areas: Mapping[SeriesKey, float], scatter: list[float],
-    model: NDArray[np.float64] | None,
+    pair_time: float, model: NDArray[np.float64] | None,
 ) -> tuple[LinearProblem, tuple[tuple[str, ...], ...], NDArray[np.float64]]:  # fmt: skip
     """Put series, scatter, continuum, pile-up and tolerances into one linear problem."""
     c = ingredients.columns
@@ -188,7 +197,7 @@ def _assemble(
     parts += [p.column[None] for p in ingredients.peaks]
     labels += [p.label for p in ingredients.peaks]
     n_bounded = len(labels)
-    nuisances = _nuisances(ingredients, areas, scatter, model) if areas else []
+    nuisances = _nuisances(ingredients, areas, scatter, pair_time, model) if areas else []
     parts += [n.column[None] for n in nuisances]
     labels += [n.label for n in nuisances]
     columns = np.concatenate(parts)
@@ -203,7 +212,7 @@ def _assemble(
 
 
 def _nuisances(ingredients: Ingredients, areas: Mapping[SeriesKey, float], scatter: list[float],
-               model: NDArray[np.float64] | None) -> list[Nuisance]:  # fmt: skip
+               pair_time: float, model: NDArray[np.float64] | None) -> list[Nuisance]:  # fmt: skip
     background = ingredients.counts if model is None else model
     widths = np.diff(ingredients.columns.grouping.edges_kev)
     found: list[Nuisance] = []
@@ -211,6 +220,7 @@ def _nuisances(ingredients: Ingredients, areas: Mapping[SeriesKey, float], scatt
         if area > 30.0:
             found += group_nuisances(key, ingredients.groups(key), area, background, ingredients.tolerances, widths)
     weighed = list(zip(ingredients.scatter, scatter, strict=True))
+    found += sum_nuisance(ingredients.pairs, pair_time, widths)
     found += shared_nuisances(ingredients.columns, areas, weighed, ingredients.tolerances)
     return found + scatter_nuisances(weighed, background, widths, ingredients.tolerances)
 

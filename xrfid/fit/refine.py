@@ -19,7 +19,7 @@ from xrfid.spectrum import FWHM_PER_SIGMA, EnergyScale, Resolution
 
 
 def refined(setting: Setting, fit: Fit) -> Setting:
-    """Return scale and line shape after taking over what the fit found for them."""
+    """Return scale, line shape and pulse-pair time after taking over what the fit found for them."""
     offset, gain = fit.coefficient("offset"), fit.coefficient("gain")
     old = setting.scale
     scale = EnergyScale(
@@ -27,7 +27,7 @@ def refined(setting: Setting, fit: Fit) -> Setting:
         old.gain_kev * (1.0 - gain),
         old.quadratic_kev * (1.0 - gain),
     )
-    return Setting(scale, refined_shape(setting.shape, fit))
+    return Setting(scale, refined_shape(setting.shape, fit), fit.coefficient("sum"))
 
 
 def refined_shape(shape: LineShape, fit: Fit) -> LineShape:

@@ -13,7 +13,7 @@ from xrfid.fit.model import Ingredients
 from xrfid.fit.nuisance import Tolerances
 from xrfid.prepare.snip import continuum, smoothed
 from xrfid.response.detector import LineShape
-from xrfid.response.pileup import pair_spectrum
+from xrfid.response.pileup import pair_spectrum, primary_spectrum
 from xrfid.response.series import Prediction
 from xrfid.spectrum import EnergyScale, Spectrum
 
@@ -26,10 +26,11 @@ USUAL_PULSE_PAIR_NS = 300.0
 
 @dataclass(frozen=True, eq=False)
 class Setting:
-    """Scale and line shape in force; they improve while the work goes on."""
+    """Scale, line shape and pulse-pair time in force; they improve while the work goes on."""
 
     scale: EnergyScale
     shape: LineShape
+    pair_time: float = 0.0
 
 
 def fitted_channels(spectrum: Spectrum, scale: EnergyScale, end_kev: float) -> tuple[int, int]:
@@ -57,12 +58,11 @@ def ingredients(
     counts = grouping.sum(spectrum.counts)
     base = _continuum_base(spectrum, prediction, fractions, setting, grouping)
     live = spectrum.live_time_s
-    pairs = grouping.sum(pair_spectrum(spectrum.counts, setting.scale))
+    unit = 1e-9 / live if live else 1.0 / max(spectrum.total_counts, 1.0)
+    primary = primary_spectrum(spectrum.counts, setting.scale, setting.pair_time * unit)
+    pairs = grouping.sum(pair_spectrum(primary, setting.scale)) * unit
     stated = prediction.instrument.detector.pulse_pair_ns or USUAL_PULSE_PAIR_NS
-    if live:
-        pairs, pair_time = pairs * 1e-9 / live, (stated, stated)
-    else:
-        pairs, pair_time = pairs / max(spectrum.total_counts, 1.0), None
+    pair_time = (stated, stated) if live else None
     return Ingredients(
         counts=counts,
         columns=columns,

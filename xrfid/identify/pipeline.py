@@ -12,7 +12,7 @@ from xrfid.fit.model import Fit, Ingredients, fit_series
 from xrfid.fit.nuisance import Tolerances
 from xrfid.fit.refine import refined
 from xrfid.fit.setup import Setting, ingredients
-from xrfid.identify.challenge import unmask_peaks
+from xrfid.identify.challenge import exchange, unmask_peaks
 from xrfid.identify.report_parts import assemble
 from xrfid.identify.result import Calibration, Identification
 from xrfid.identify.select import backward, forward, free_peaks
@@ -107,6 +107,8 @@ def _select(
     fit = forward(drawn, start, candidates, enter, handicap=settings.handicap)
     fit = backward(drawn, fit, fixed, enter)
     if thorough:
+        fit = exchange(drawn, fit, fixed, candidates)
+        drawn, fit = unmask_peaks(drawn, fit, fixed)
         peaks = free_peaks(drawn, fit, _PEAK_SIGNIFICANCE)
         if peaks:
             drawn = drawn.with_peaks(peaks)

@@ -48,6 +48,19 @@ def pair_spectrum(counts: NDArray[np.float64], scale: EnergyScale) -> NDArray[np
     return out
 
 
+def primary_spectrum(counts: NDArray[np.float64], scale: EnergyScale, per_pair: float) -> NDArray[np.float64]:
+    """The recorded counts less the pairs among them, so that pairs of pairs are not counted twice.
+
+    Parameters
+    ----------
+    per_pair : float
+        Pulse-pair time over live time, as found so far; 0 leaves the counts as they are.
+    """
+    if per_pair <= 0:
+        return counts
+    return np.asarray(np.maximum(counts - per_pair * pair_spectrum(counts, scale), 0.0))
+
+
 def partial_overlap_spectrum(pairs: NDArray[np.float64], counts: NDArray[np.float64], scale: EnergyScale,
                              n_steps: int = 12) -> NDArray[np.float64]:  # fmt: skip
     """Spectrum of pairs of which the second pulse adds only a part of its height.
