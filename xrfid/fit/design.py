@@ -11,6 +11,7 @@ from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.interpolate import BSpline
 from scipy.ndimage import gaussian_filter1d
 
 from xrfid.atoms.lines import GROUPS
@@ -274,16 +275,17 @@ def scattered_continuum(
     density += np.interp(grouping.centres_kev, scattered.incoherent_kev[:n],
                          scattered.incoherent[:n] / source.bin_kev / squeeze, left=0.0, right=0.0)  # fmt: skip
     width = float(np.median(shape.resolution.sigma_kev(grouping.centres_kev) / np.diff(edges)))
-    return np.asarray(gaussian_filter1d(density * np.diff(edges), width))
+    return np.asarray(gaussian_filter1d(density, width) * np.diff(edges))
 
 
-def hats(grouping: Grouping, shape: LineShape, spacing_fwhm: float, least_kev: float) -> NDArray[np.float64]:
-    """Piecewise linear functions that add up to 1, knots `spacing_fwhm` FWHM apart, shape (n_knots, n)."""
+def smooth_functions(grouping: Grouping, shape: LineShape, spacing_fwhm: float, least_kev: float) -> NDArray[np.float64]:
+    """Cubic B-splines that add up to 1, knots `spacing_fwhm` FWHM apart, shape (n_functions, n)."""
     centres = grouping.centres_kev
     knots = [float(centres[0])]
     while knots[-1] < centres[-1]:
         step = max(spacing_fwhm * float(shape.resolution.fwhm_kev(max(knots[-1], 0.5))), least_kev)
         knots.append(knots[-1] + step)
     stretch = (centres[-1] - centres[0]) / (knots[-1] - knots[0])
-    at = centres[0] + (np.array(knots) - knots[0]) * stretch
-    return np.array([np.interp(centres, at, unit) for unit in np.eye(at.size)])
+    inner = centres[0] + (np.array(knots) - knots[0]) * stretch
+    padded = np.concatenate([[inner[0]] * 3, inner, [inner[-1]] * 3])
+    return np.asarray(BSpline.design_matrix(np.clip(centres, inner[0], inner[-1]), padded, 3).toarray().T)

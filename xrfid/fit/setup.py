@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from xrfid.fit.design import SeriesColumns, hats, scatter_columns, scattered_continuum
+from xrfid.fit.design import SeriesColumns, smooth_functions, scatter_columns, scattered_continuum
 from xrfid.fit.grouping import Grouping
 from xrfid.fit.model import Ingredients
 from xrfid.fit.nuisance import Tolerances
@@ -67,7 +67,7 @@ def ingredients(
         counts=counts,
         columns=columns,
         scatter=scatter_columns(prediction, fractions, setting.shape, grouping),
-        continuum=base * hats(grouping, setting.shape, KNOT_SPACING_FWHM, KNOT_LEAST_KEV),
+        continuum=base * smooth_functions(grouping, setting.shape, KNOT_SPACING_FWHM, KNOT_LEAST_KEV),
         curvature=CURVATURE,
         pairs=pairs,
         pair_time=pair_time,
@@ -81,12 +81,13 @@ def _continuum_base(
 ) -> NDArray[np.float64]:
     """The continuum's shape in counts: scattered braking radiation brought to the level SNIP finds."""
     clipped = continuum(spectrum.counts, setting.scale, setting.shape.resolution)
-    level = np.maximum(grouping.sum(clipped), 0.0)
-    floor = 0.02 * np.diff(grouping.starts)
-    shape = scattered_continuum(prediction, fractions, setting.shape, grouping)
+    per_group = np.diff(grouping.starts)
+    level = np.maximum(grouping.sum(clipped), 0.0) / per_group
+    floor = 0.02
+    shape = scattered_continuum(prediction, fractions, setting.shape, grouping) / per_group
     if not shape.any():
-        return np.asarray(np.maximum(smoothed(level, 9), floor))
+        return np.asarray(np.maximum(smoothed(level, 9), floor) * per_group)
     # the ratio of the two, followed slowly, keeps the physical edges and takes the level from the data
     window = max(grouping.n // 12, 5)
     ratio = smoothed(level + floor, window) / smoothed(shape + 1e-6 * shape.max(), window)
-    return np.asarray(np.maximum(shape * smoothed(ratio, window), floor))
+    return np.asarray(np.maximum(shape * smoothed(ratio, window), floor) * per_group)

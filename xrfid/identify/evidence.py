@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 from xrfid.atoms.lines import GROUP_INDEX, GROUPS
 from xrfid.fit.model import Fit, FreePeak, Ingredients, fit_series
 from xrfid.identify.result import Evidence, LineEvidence, Rival
-from xrfid.identify.select import PEAK_WIDTHS, draw_peak, local_misfit, score
+from xrfid.identify.select import PEAK_WIDTHS, contradicted, draw_peak, local_misfit, score
 from xrfid.response.series import SeriesKey
 
 _VISIBLE = 3.5
@@ -101,12 +101,18 @@ def _rivals(
     columns = ingredients.columns
     pool = [k for k in candidates if k in columns and k.z != keys[0].z and k not in without.areas]
     unit = columns.unit[[columns.index(k) for k in pool]]
-    variance = np.maximum(without.variance, fit.variance)
-    z = score(without, unit, ingredients.counts, variance).z if pool else np.empty(0)
+    variance = np.maximum(without.variance, ingredients.counts)
+    if not pool:
+        return ()
+    scored = score(without, unit, ingredients.counts, variance)
+    z = scored.z
+    own = float(np.max(np.maximum(score(without, columns.unit[[columns.index(k) for k in keys]], ingredients.counts, variance).z, 0.0)) ** 2)
     mine = columns.unit[[columns.index(k) for k in keys]]
     found = []
     for i in np.argsort(-z)[:3]:
-        if z[i] <= 0 or z[i] ** 2 < 0.5 * loss or not _share_channels(unit[i], mine, variance):
+        if z[i] <= 0 or z[i] ** 2 < 0.5 * own or not _share_channels(unit[i], mine, variance):
+            continue
+        if contradicted(ingredients, without, pool[i], float(scored.amplitude[i])):
             continue
         trial = fit_series(ingredients, (*without.keys, pool[i]), without, rounds=1, iterations=3)
         found.append(Rival(str(pool[i]), "element", float(trial.objective - fit.objective)))

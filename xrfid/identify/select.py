@@ -64,7 +64,6 @@ def forward(
     *,
     near: Fit | None = None,
     handicap: Callable[[SeriesKey], float] = lambda key: 1.0,
-    vetoed: Callable[[Fit, SeriesKey, float], bool] = lambda fit, key, amplitude: False,
     most: int = 45,
 ) -> Fit:
     """Add series while the best of them scores above `enter`.
@@ -80,8 +79,6 @@ def forward(
         Starts the weights.
     handicap : callable
         Divides a candidate's significance (elements that hardly ever occur).
-    vetoed : callable
-        Tells that a candidate contradicts its element's other series.
     """
     counts = ingredients.counts
     keys = list(start)
@@ -100,7 +97,7 @@ def forward(
         z = scored.z / divide
         open_ = np.array([k not in keys and k not in rejected for k in pool])
         z = np.where(open_, z, -np.inf)
-        added = _pick(z, unit, variance, enter, lambda i: vetoed(fit, pool[i], float(scored.amplitude[i])))
+        added = _pick(z, unit, variance, enter, lambda i: contradicted(ingredients, fit, pool[i], float(scored.amplitude[i])))
         if not added:
             break
         keys += [pool[i] for i in added]
@@ -141,6 +138,27 @@ def companions(ingredients: Ingredients, fit: Fit) -> list[SeriesKey]:
         if predicted**2 * float(np.sum(column**2 / fit.variance)) > 1.0:
             found.append(key)
     return found
+
+
+_UNRELIABLE = 4.0
+"""Predicted ratios of an element's series may be off by this factor (excitation, filters, matrix)."""
+
+
+def contradicted(ingredients: Ingredients, fit: Fit, key: SeriesKey, amplitude: float) -> bool:
+    """Whether an element's other series speak against `amplitude` counts in `key`.
+
+    Another series that the excitation must bring out, by the prediction less a generous factor,
+    and that the counts do not show, is a contradiction.
+    """
+    columns = ingredients.columns
+    others = [k for k in columns.keys if k.z == key.z and k != key and k not in fit.areas]
+    if not others or amplitude <= 0:
+        return False
+    unit = columns.unit[[columns.index(k) for k in others]]
+    found = score(fit, unit, ingredients.counts, np.maximum(fit.variance, ingredients.counts))
+    intensity = columns.intensity
+    predicted = amplitude * np.array([intensity[columns.index(k)] for k in others]) / intensity[columns.index(key)]
+    return bool(np.any(predicted / _UNRELIABLE > np.maximum(found.amplitude, 0.0) + 3.0 * found.sigma))
 
 
 def _pick(
