@@ -21,7 +21,6 @@ from xrfid.report.figures import (
     save_figure,
 )
 
-
 SHOWN = ("Si", "S", "Ar", "Cr", "Mn", "Fe", "Ni", "Cu", "Mo", "Rh")
 
 

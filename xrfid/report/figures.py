@@ -326,10 +326,7 @@ def _proof_panel(panel: ProofPanel, ax: Axes) -> None:
                 color=style.INK, ecolor=style.SOFT, elinewidth=0.7, label="counts")  # fmt: skip
     ax.plot(energy, panel.without, **style.WITHOUT.matplotlib(), label="best without it")
     ax.plot(energy, panel.model, **style.MODEL.matplotlib(), label="model")
-    low = float(min(panel.counts.min(), panel.without.min()))
-    high = float(max(panel.counts.max(), panel.model.max()))
-    margin = 0.12 * (high - low) + 1.0
-    ax.set_ylim(max(0.0, low - margin), high + 1.6 * margin)
+    ax.set_ylim(*panel.counts_range)
     ax.set_xlim(float(energy[0]), float(energy[-1]))
     ax.set_title(panel.title, loc="left", fontsize=9, fontweight="bold")
     if panel.net:

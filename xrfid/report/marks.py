@@ -44,14 +44,22 @@ def marks(identification: Identification) -> list[Mark]:
     return sorted((m for m in found if inside[0] < m.energy_kev < inside[1]), key=lambda m: m.energy_kev)
 
 
+def ranked(found: Sequence[Mark]) -> list[Mark]:
+    """Return the marks in the order of their importance: the first of every element, then by prominence."""
+    by_prominence = sorted(found, key=lambda m: -m.prominence)
+    named: set[str] = set()
+    firsts: list[Mark] = []
+    others: list[Mark] = []
+    for mark in by_prominence:
+        leads = mark.kind in ("sample", "open", "unexplained") and (mark.text.split()[0] not in named)
+        named.add(mark.text.split()[0])
+        (firsts if leads else others).append(mark)
+    return [*firsts, *others]
+
+
 def strongest(found: Sequence[Mark], at_most: int) -> list[Mark]:
-    """Return at most so many marks, by energy: the first name of every element, then by prominence."""
-    if len(found) <= at_most:
-        return list(found)
-    ranked = sorted(found, key=lambda m: -m.prominence)
-    firsts = {m.text.split()[0]: m for m in reversed(ranked) if m.kind in ("sample", "open", "unexplained")}
-    order = [*(m for m in ranked if m in firsts.values()), *(m for m in ranked if m not in firsts.values())]
-    return sorted(order[:at_most], key=lambda m: m.energy_kev)
+    """Return at most so many marks, the most important ones, by energy."""
+    return sorted(ranked(found)[:at_most], key=lambda m: m.energy_kev)
 
 
 def spread(wanted: Sequence[float], gap: float, low: float, high: float) -> NDArray[np.float64]:
@@ -112,7 +120,7 @@ def _line_marks(identification: Identification) -> list[Mark]:
             i = int(np.argmin(np.abs(curves.energy_kev - energy)))
             prominence = float(curves.parts[name][i] / np.sqrt(max(float(curves.model[i]), 1.0)))
             if prominence >= _VISIBLE or (kind == "sample" and group.endswith("a")):
-                text = f"{finding.element} {wording.line_name(group)}"
+                text = f"{finding.element} {wording.line_name(group)}" + (" ?" if kind == "open" else "")
                 said = f"{share:.0%} of the {name} series"
                 found.append(Mark(text, energy, _top(curves, energy), prominence, kind, said))
     return found

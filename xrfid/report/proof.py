@@ -29,8 +29,20 @@ class ProofPanel:
     counts: NDArray[np.float64]
     model: NDArray[np.float64]
     without: NDArray[np.float64]
+    fwhm_kev: float
     net: str = ""
     expected: str = ""
+
+    @property
+    def counts_range(self) -> tuple[float, float]:
+        """Range of counts to show: what lies on the lines; a high neighbour runs out of the picture."""
+        low, high = self.energies_kev[0] - 1.2 * self.fwhm_kev, self.energies_kev[-1] + 1.2 * self.fwhm_kev
+        near = (self.energy_kev > low) & (self.energy_kev < high)
+        tops = np.maximum(self.counts, self.model)[near]
+        bottoms = np.minimum(np.minimum(self.counts, self.without), self.model)
+        top, bottom = float(tops.max(initial=1.0)), float(bottoms.min())
+        margin = 0.12 * (top - bottom) + 1.0
+        return max(0.0, bottom - margin), top + 1.3 * margin
 
 
 def proof_panels(identification: Identification, element: str, at_most: int = 6) -> list[ProofPanel]:
@@ -70,7 +82,8 @@ def _panel(
 ) -> ProofPanel:
     curves = identification.curves
     energies = tuple(g[3] for g in groups)
-    half = _HALF_WINDOW_FWHM * float(identification.calibration.resolution.fwhm_kev(float(np.mean(energies))))
+    fwhm = float(identification.calibration.resolution.fwhm_kev(float(np.mean(energies))))
+    half = _HALF_WINDOW_FWHM * fwhm
     inside = slice(
         int(np.searchsorted(curves.energy_kev, energies[0] - half)),
         int(np.searchsorted(curves.energy_kev, energies[-1] + half)),
@@ -90,6 +103,7 @@ def _panel(
         counts=curves.counts[inside],
         model=curves.model[inside],
         without=curves.without[element][inside],
+        fwhm_kev=fwhm,
         net=net,
         expected=expected,
     )
