@@ -184,7 +184,8 @@ def test_saving_by_ending(steel, tmp_path, ending, magic):
     assert path.read_bytes().startswith(magic)
     with pytest.raises(OutputError, match="exists"):
         save_figure(draw_proof(steel, "Si")[0].figure, path)
-    save_figure(draw_proof(steel, "Mn")[0].figure, path, overwrite=True)
+    save_figure(draw_proof(steel, "Mn"), path, overwrite=True)
+    save_figure(draw_scale_residuals(steel), path, overwrite=True)
 
 
 def test_the_same_figure_is_the_same_file(steel, tmp_path):

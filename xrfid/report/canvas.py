@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-import os
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -54,9 +53,19 @@ def drawable(text: str) -> str:
 
 
 def save_figure(
-    figure: Figure, path: str | os.PathLike[str], overwrite: bool = False, dpi: float = 160.0
+    drawn: Figure | Axes | Sequence[Axes], path: str | Path, overwrite: bool = False, dpi: float = 160.0
 ) -> None:
     """Write a figure as PNG, SVG or PDF, by the ending of `path`; it appears whole or not at all.
+
+    Parameters
+    ----------
+    drawn : Figure, Axes or sequence of Axes
+        A figure, or what a ``draw_`` function returned: the figure that holds these axes.
+    path : str or Path
+    overwrite : bool
+        Replace what is there.
+    dpi : float
+        Dots per inch of a PNG.
 
     Raises
     ------
@@ -70,6 +79,9 @@ def save_figure(
     ending = Path(path).suffix.lower()
     if ending not in FORMATS:
         raise InputError(str(path), f'figures are not written as "{ending}"', "use .png, .svg or .pdf")
+    first = drawn[0] if isinstance(drawn, Sequence) else drawn
+    figure = first.get_figure(root=True)
+    assert figure is not None, "these axes belong to no figure"
     undated: dict[str, Any] = {".svg": {"Date": None}, ".pdf": {"CreationDate": None}, ".png": {}}[ending]
     with atomic_output(path, overwrite=overwrite) as unfinished, look():
         figure.savefig(unfinished, format=ending[1:], dpi=dpi, metadata=undated)

@@ -10,10 +10,10 @@ from __future__ import annotations
 import base64
 import hashlib
 import json
-import os
 from collections.abc import Callable, Mapping
 from functools import lru_cache
 from importlib.resources import files
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from xrfid.errors import one_line
@@ -66,7 +66,7 @@ def render_page(identification: Identification) -> str:
     )  # fmt: skip
 
 
-def save_page(identification: Identification, path: str | os.PathLike[str], overwrite: bool = False) -> None:
+def save_page(identification: Identification, path: str | Path, overwrite: bool = False) -> None:
     """Write the page; it appears whole or not at all.
 
     Raises
