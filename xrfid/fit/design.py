@@ -145,6 +145,8 @@ class ScatterColumn:
     predicted: float
     groups: tuple[tuple[str, float, NDArray[np.float64]], ...]
     """Name, share and unit column of each line group; empty where they are not told apart."""
+    lines: DrawnLines | None = None
+    """The lines of a coherent column, weights adding up to 1."""
 
 
 _COMPTON_STEP_KEV = 0.01
@@ -192,7 +194,8 @@ def _coherent(of: str, rows: NDArray[np.intp], names: list[str], scattered: Scat
     strongest = int(np.argmax(weight))
     groups = tuple((kinds[i], float(share[i]), drawn[i] / share[i]) for i in range(len(kinds)))
     return ScatterColumn("coherent scatter", of, float(lines.energy_kev[strongest]), drawn.sum(axis=0),
-                         float(scattered.coherent[rows].sum()), groups)  # fmt: skip
+                         float(scattered.coherent[rows].sum()), groups,
+                         DrawnLines(lines.energy_kev, weight, np.zeros(weight.size, dtype=np.intp)))  # fmt: skip
 
 
 def _incoherent(of: str, rows: NDArray[np.intp], names: list[str], prediction: Prediction,

@@ -61,6 +61,8 @@ class Ingredients:
     tolerances : Tolerances
     peaks : tuple of FreePeak
         Peaks that no line explains.
+    scatter_expected : mapping from index of `scatter` to (counts, standard uncertainty)
+        What is known beforehand of a scattered line group's size.
     """
 
     counts: NDArray[np.float64]
@@ -73,6 +75,7 @@ class Ingredients:
     partial: NDArray[np.float64] | None
     tolerances: Tolerances
     peaks: tuple[FreePeak, ...] = ()
+    scatter_expected: Mapping[int, tuple[float, float]] = field(default_factory=dict)
     _groups: dict[SeriesKey, list[GroupColumn]] = field(default_factory=dict)
 
     def with_peaks(self, peaks: tuple[FreePeak, ...]) -> Ingredients:
@@ -185,7 +188,7 @@ def _assemble(
     labels += [("scatter", str(i)) for i in range(len(ingredients.scatter))]
     parts.append(ingredients.continuum)
     labels += [("continuum", str(i)) for i in range(ingredients.continuum.shape[0])]
-    prior: dict[int, tuple[float, float]] = {}
+    prior = {len(keys) + i: known for i, known in ingredients.scatter_expected.items()}
     if ingredients.pairs.any():
         if ingredients.pair_time is not None:
             prior[len(labels)] = ingredients.pair_time

@@ -22,6 +22,7 @@ from xrfid.response.detector import (
     draw_shelf,
     draw_tail,
     draw_wings,
+    joined,
 )
 from xrfid.response.series import SeriesKey
 
@@ -100,14 +101,19 @@ def shared_nuisances(
     tolerances: Tolerances,
 ) -> list[Nuisance]:  # fmt: skip
     """Scale, width, tail, shelf, natural widths and escape probability of all lines together."""
-    lines, natural, _ = columns.lines({k: a for k, a in areas.items() if a > 0})
+    fluorescence, natural, _ = columns.lines({k: a for k, a in areas.items() if a > 0})
+    coherent = [
+        DrawnLines(c.lines.energy_kev, a * c.lines.weight, c.lines.column)
+        for c, a in scatter if c.lines is not None and a > 0
+    ]  # fmt: skip
+    lines = joined(fluorescence, *coherent)
     shape, edges = columns.shape, columns.grouping.edges_kev
     if not lines.weight.size:
         return []
     found: list[Nuisance] = []
     core = draw_core(lines, shape.resolution, edges, 1)[0]
-    coherent = sum((a * c.column for c, a in scatter if c.kind == "coherent scatter"), np.zeros_like(core))
-    slope = np.gradient((core + coherent), columns.grouping.centres_kev)
+    widths = np.diff(edges)
+    slope = np.gradient(core / widths, columns.grouping.centres_kev) * widths
     found.append(Nuisance(("offset",), -slope, tolerances.offset_kev))
     distance = columns.grouping.centres_kev - GAIN_PIVOT_KEV
     found.append(Nuisance(("gain",), -slope * distance, tolerances.gain))
@@ -118,7 +124,7 @@ def shared_nuisances(
     by_energy = second * columns.grouping.centres_kev / 5.9
     found.append(Nuisance(("fano",), by_energy, tolerances.fano * mn**2))
     found += _tail_nuisances(lines, columns, core, tolerances)
-    wings = draw_wings(lines, natural, shape.resolution, edges, 1)[0]
+    wings = draw_wings(fluorescence, natural, shape.resolution, edges, 1)[0]
     found.append(Nuisance(("wings",), wings, tolerances.wings, mean=1.0 - tolerances.wings))
     escapes = lines.escapes(columns.prediction.instrument.detector.material)
     if escapes.weight.size:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -50,6 +51,7 @@ def fitted_channels(spectrum: Spectrum, scale: EnergyScale, end_kev: float) -> t
 def ingredients(
     spectrum: Spectrum, prediction: Prediction, fractions: NDArray[np.float64], setting: Setting,
     tolerances: Tolerances,
+    scatter_expected: Mapping[int, tuple[float, float]] | None = None,
 ) -> Ingredients:  # fmt: skip
     """Draw all columns for one estimate of the sample."""
     first, last = fitted_channels(spectrum, setting.scale, prediction.source.end_kev)
@@ -73,6 +75,7 @@ def ingredients(
         pair_time=pair_time,
         partial=None,
         tolerances=tolerances,
+        scatter_expected=scatter_expected or {},
     )
 
 

@@ -12,11 +12,12 @@ from xrfid.atoms.lines import GROUP_INDEX, GROUPS
 from xrfid.fit.model import Fit, FreePeak, Ingredients, fit_series
 from xrfid.identify.result import Evidence, LineEvidence, Rival
 from xrfid.identify.select import PEAK_WIDTHS, contradicted, draw_peak, local_misfit, score
+from xrfid.identify.settings import Settings
 from xrfid.response.series import SeriesKey
 
 _VISIBLE = 3.5
 """A line group predicted this many sigma strong must show itself."""
-RIVAL_MARGIN = 12.0
+RIVAL_MARGIN = 6.0
 """A rival counts as doing equally well if the fit loses no more deviance with it than this."""
 
 
@@ -51,7 +52,7 @@ def gather(
         strongest_own_line="" if strongest is None else f"{strongest.series} {strongest.group}",
         missing_lines=tuple(f"{line.series} {line.group}" for line in lines if _missing(line)),
     )
-    rivals = _rivals(ingredients, fit, without, keys, candidates, loss)
+    rivals = _rivals(ingredients, fit, without, keys, candidates)
     return ElementEvidence(z, keys, without, evidence, rivals)
 
 
@@ -75,11 +76,11 @@ def _lines(ingredients: Ingredients, fit: Fit, key: SeriesKey) -> list[LineEvide
         deviates = fit.coefficient("share", str(key), group.name)
         in_model = area * group.share * (1.0 + deviates)
         observed = in_model + float(np.sum(column * residual / fit.variance)) / max(information, 1e-300)
-        around = float(np.sum(column * series))
-        mine = float(np.sum(column * column)) * in_model
+        mine = float(np.sum(column * column)) * max(area * group.share, in_model)
+        others = max(float(np.sum(column * series)) - float(np.sum(column * column)) * area * group.share, 0.0)
         found.append(
             LineEvidence(key.series, group.name, group.energy_kev, area * group.share, observed,
-                         float(information**-0.5), float(np.clip(mine / max(around, 1e-300), 0.0, 1.0)))
+                         float(information**-0.5), mine / max(mine + others, 1e-300))
         )  # fmt: skip
     return found
 
@@ -88,26 +89,26 @@ def _missing(line: LineEvidence) -> bool:
     """Whether a line that must show itself does not."""
     known_to = max(GROUPS[GROUP_INDEX[line.group]].tolerance, 0.15)
     short = line.predicted - line.observed
-    return line.observed < 0.5 * line.predicted and short > _VISIBLE * float(
+    return line.own > 0.5 and line.observed < 0.5 * line.predicted and short > _VISIBLE * float(
         np.hypot(line.sigma, known_to * line.predicted)
     )
 
 
 def _rivals(
     ingredients: Ingredients, fit: Fit, without: Fit, keys: Sequence[SeriesKey], candidates: Sequence[SeriesKey],
-    loss: float,
 ) -> tuple[Rival, ...]:  # fmt: skip
     """Other explanations of the counts that `keys` explain, the best first."""
     columns = ingredients.columns
-    pool = [k for k in candidates if k in columns and k.z != keys[0].z and k not in without.areas]
-    unit = columns.unit[[columns.index(k) for k in pool]]
-    variance = np.maximum(without.variance, ingredients.counts)
+    rare = {k for k in candidates if Settings.handicap(k) > 1.0}
+    pool = [k for k in candidates if k in columns and k.z != keys[0].z and k not in without.areas and k not in rare]
     if not pool:
         return ()
+    unit = columns.unit[[columns.index(k) for k in pool]]
+    mine = columns.unit[[columns.index(k) for k in keys]]
+    variance = np.maximum(without.variance, ingredients.counts)
     scored = score(without, unit, ingredients.counts, variance)
     z = scored.z
-    own = float(np.max(np.maximum(score(without, columns.unit[[columns.index(k) for k in keys]], ingredients.counts, variance).z, 0.0)) ** 2)
-    mine = columns.unit[[columns.index(k) for k in keys]]
+    own = float(np.max(np.maximum(score(without, mine, ingredients.counts, variance).z, 0.0)) ** 2)
     found = []
     for i in np.argsort(-z)[:3]:
         if z[i] <= 0 or z[i] ** 2 < 0.5 * own or not _share_channels(unit[i], mine, variance):

@@ -12,6 +12,7 @@ from xrfid.fit.model import Fit, Ingredients, fit_series
 from xrfid.fit.nuisance import Tolerances
 from xrfid.fit.refine import refined
 from xrfid.fit.setup import Setting, ingredients
+from xrfid.identify.anode import AnodeInSample, anode_in_sample
 from xrfid.identify.challenge import exchange, unmask_peaks
 from xrfid.identify.report_parts import assemble
 from xrfid.identify.result import Calibration, Identification
@@ -42,6 +43,7 @@ class Work:
     composition: Composition
     ingredients: Ingredients
     fit: Fit
+    anode: AnodeInSample
     candidates: tuple[SeriesKey, ...]
     threshold: float
 
@@ -85,16 +87,19 @@ def search(spectrum: Spectrum, instrument: Instrument, settings: Settings) -> Wo
     threshold = settings.threshold(len({k.z for k in candidates}))
     fractions = prediction.light_matrix_only()
     kept: tuple[SeriesKey, ...] = ()
+    anode = AnodeInSample()
     for enter, known in ((_FIRST_PASS, False), (threshold, True), (threshold, True)):
         if kept:
             setting = refined(setting, fit)
-        drawn = ingredients(spectrum, prediction, fractions, setting, Tolerances(matrix_known=known))
+        tolerances = Tolerances(matrix_known=known)
+        drawn = ingredients(spectrum, prediction, fractions, setting, tolerances, anode.expected)
         drawn, fit = _select(drawn, kept, candidates, instrument, settings, enter, thorough=known)
-        composition = _composition(prediction, drawn, fit)
+        anode = anode_in_sample(drawn, fit)
+        kept = (*fit.keys, *(k for k in anode.series if k not in fit.areas))
+        composition = _composition(prediction, drawn, fit, anode)
         fractions = composition.fractions
-        kept = fit.keys
-    return Work(spectrum, instrument, settings, calibration, prediction, setting, composition, drawn, fit, candidates,
-                threshold)  # fmt: skip
+    return Work(spectrum, instrument, settings, calibration, prediction, setting, composition, drawn, fit, anode,
+                candidates, threshold)  # fmt: skip
 
 
 def _select(
@@ -126,11 +131,19 @@ def _fixed(drawn: Ingredients, instrument: Instrument, settings: Settings) -> tu
     )
 
 
-def _composition(prediction: Prediction, drawn: Ingredients, fit: Fit) -> Composition:
+def _composition(prediction: Prediction, drawn: Ingredients, fit: Fit, anode: AnodeInSample) -> Composition:
     """Rough composition from the areas and the scattered radiation."""
     window = (_SCATTER_FROM_KEV, 0.95 * prediction.source.end_kev)
     centres = drawn.columns.grouping.centres_kev
     inside: NDArray[np.bool_] = (centres > window[0]) & (centres < window[1])
     scattered = float(fit.part("scatter", "continuum")[inside].sum())
     areas = {k: fit.areas[k] for k in fit.keys if k.element != "Ar"}
-    return estimate(prediction, areas, fit.sigmas, scattered, window)
+    sigmas = dict(fit.sigmas)
+    for i, column in enumerate(drawn.scatter):
+        key = next((k for k in anode.series if str(k) == column.of), None)
+        if column.kind == "coherent scatter" and key is not None and key not in areas:
+            # found only now: until the next pass the sample's own lines hide in the scattered ones
+            hidden = fit.coefficient("scatter", str(i))
+            areas[key], sigmas[key] = hidden, 0.1 * hidden
+            scattered -= hidden
+    return estimate(prediction, areas, sigmas, max(scattered, 0.0), window)

@@ -69,6 +69,11 @@ def _strength(fit: Fit, key: SeriesKey) -> float:
 def _finding(work: Work, found: ElementEvidence) -> Finding:
     name = symbol(found.z)
     verdict, reason = decide(found)
+    if name == work.prediction.source.anode and verdict is Verdict.IDENTIFIED:
+        reason = (
+            f"The {name} lines are {work.anode.excess:.0f} times larger than the tube's own scattered lines can be: "
+            f"the sample itself holds {name}."
+        )
     if name in work.instrument.stray.elements:
         verdict = Verdict.INSTRUMENT
         reason = f"{name} lines come from the instrument itself, as its file says; the sample may hold {name} as well."
@@ -111,6 +116,8 @@ def _anode_finding(work: Work) -> Finding | None:
     results = tuple(SeriesResult(s, a, float(np.sqrt(v)), float(1.645 * np.sqrt(v)), float(3.29 * np.sqrt(v) + 2.71),
                                  float(a + 1.645 * np.sqrt(v))) for s, (a, v) in series.items())  # fmt: skip
     significance = max((r.area / max(r.sigma, 1e-9) for r in results), default=0.0)
+    if any(k.element == anode for k in work.fit.keys):
+        return None
     reason = f"{anode} is the tube's own target: its scattered lines are in every spectrum; the sample may hold {anode} too."
     return Finding(anode, Verdict.INSTRUMENT, reason, results,
                    Evidence(significance, significance**2, work.threshold, 1.0))  # fmt: skip
