@@ -1,0 +1,182 @@
+"""The energy scale from counts alone: no header, no known element, at best the anode and the voltage.
+
+Peaks are found without a scale; a sieve over all offsets and gains leaves a few dozen on which whole series reach
+the peaks; each of these is tried against the spectrum, moved to where its lines fit best, and compared. The best
+scale is returned only if it is well ahead of every different one.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from xrfid.errors import Untrustworthy
+from xrfid.instrument import Instrument
+from xrfid.prepare.patterns import Patterns, patterns_of
+from xrfid.prepare.peaks import Peak, Widths, find_peaks
+from xrfid.prepare.reduced import Reduced, reduce
+from xrfid.prepare.sieve import Grid, Sieve, grid_of
+from xrfid.prepare.trial import Bench, Trial
+from xrfid.spectrum import FANO_FACTOR, MN_KA_KEV, PAIR_ENERGY_EV, EnergyScale, Resolution
+
+FWHM_MN_KEV = {"Si": (0.105, 0.36), "Ge": (0.095, 0.36), "CdTe": (0.13, 0.9)}
+"""Width at Mn K-alpha that a working detector can have (common practice, no source)."""
+LEAST_LEAD = 30.0
+"""Deviance by which the best scale must beat every different one."""
+LEAST_LEAD_SHARE = 0.06
+"""The same as a share of what the best scale explains, for spectra with so many counts that every model misfits."""
+LEAST_EXPLAINED = 0.6
+_ALIGNED = 700
+_SIEVED, _MOVED, _POLISHED = 40, 12, 4
+
+
+@dataclass(frozen=True, eq=False)
+class Found:
+    """A scale found, the best different one, and how far it is behind."""
+
+    scale: EnergyScale
+    resolution: Resolution
+    offset_sigma_kev: float
+    gain_sigma_kev: float
+    runner_up: EnergyScale | None
+    lead: float
+    explained: float
+    elements: tuple[str, ...]
+    """What explains the spectrum on this scale, strongest first; a by-product, no identification."""
+    peaks: tuple[Peak, ...]
+
+
+class Search:
+    """Peaks, bins and patterns of one spectrum, ready for scales to be tried on."""
+
+    def __init__(self, counts: NDArray[np.float64], instrument: Instrument, end_kev: float | None) -> None:
+        self.peaks, self.widths = find_peaks(counts)
+        self.real = [p for p in self.peaks if p.area > 0]
+        material = instrument.detector.material
+        self.fano, self.pair_ev = FANO_FACTOR[material], PAIR_ENERGY_EV[material]
+        self.bounds = FWHM_MN_KEV[material]
+        self.reduced: Reduced = reduce(counts, self.widths)
+        known = instrument.tube is not None and "anode" in instrument.tube.model_fields_set
+        self.patterns: Patterns = patterns_of(instrument, end_kev, known)
+        self.end_kev = end_kev
+        self.bench = Bench(self.reduced, self.patterns, material, self.fano, self.pair_ev)
+
+    def noise(self, scale: EnergyScale) -> float:
+        """Squared electronic FWHM, keV squared, that the strong peaks mean on a scale, within the detector's bounds."""
+        at = np.array([p.channel for p in self.real[:5]])
+        square = np.array([self.bench.noise_of(scale, c, f) for c, f in zip(at, self.widths.fwhm(at), strict=True)])
+        fano = self.bench.slope * MN_KA_KEV
+        return float(np.clip(np.median(square), self.bounds[0] ** 2 - fano, self.bounds[1] ** 2 - fano))
+
+    def hypotheses(self) -> list[EnergyScale]:
+        """The scales that the sieve leaves, best first, no two alike."""
+        at = np.array(sorted(p.channel for p in self.real[:5]))
+        grid = grid_of(self.real, (at, self.widths.fwhm(at)), self.bench.slope, self.bounds, self.end_kev)
+        sieve = Sieve(self.reduced, self.patterns, self.real)
+        best = np.argsort(-sieve.scores(grid))[:_ALIGNED]
+        grid, scores = sieve.aligned(Grid(grid.offset_kev[best], grid.gain_kev[best]))
+        order = np.argsort(-scores)
+        low, high = at[0], max(p.channel for p in self.real[:8])
+        kept: list[EnergyScale] = []
+        for i in order:
+            scale = EnergyScale(float(grid.offset_kev[i]), float(grid.gain_kev[i]))
+            if all(_apart(scale, k, (low, high)) > 0.4 * self._fwhm(k, (low, high)) for k in kept):
+                kept.append(scale)
+            if len(kept) == _SIEVED:
+                break
+        return kept
+
+    def _fwhm(self, scale: EnergyScale, at: tuple[float, float]) -> float:
+        return float(np.min(self.widths.fwhm(np.array(at)))) * scale.gain_kev
+
+    def best(self, extra: tuple[EnergyScale, ...] = ()) -> list[Trial]:
+        """Trials of the most promising scales, polished, best first; `extra` scales are always among those moved."""
+        bench = self.bench
+        first = [bench.try_out(s, self.noise(s), 6, 1) for s in self.hypotheses()]
+        first.sort(key=lambda t: t.score)
+        first = first[:_MOVED] + [bench.try_out(s, self.noise(s), 6, 1) for s in extra]
+        moved = sorted((bench.refined(t, 2, 7) for t in first), key=lambda t: t.score)
+        polished: list[Trial] = []
+        for trial in moved:
+            if all(different(trial.scale, p.scale) for p in polished):
+                polished.append(bench.refined(bench.try_out(trial.scale, trial.noise), 3))
+            if len(polished) == _POLISHED:
+                break
+        return sorted(polished, key=lambda t: t.score)
+
+
+def _apart(a: EnergyScale, b: EnergyScale, channels: tuple[float, float]) -> float:
+    at = np.array(channels)
+    return float(np.max(np.abs(a.energy_kev(at) - b.energy_kev(at))))
+
+
+def different(a: EnergyScale, b: EnergyScale) -> bool:
+    """Whether two scales are two answers: gains 1 % or offsets 100 eV apart."""
+    return abs(a.gain_kev / b.gain_kev - 1.0) > 0.01 or abs(a.offset_kev - b.offset_kev) > 0.1
+
+
+def find_scale(counts: NDArray[np.float64], instrument: Instrument, end_kev: float | None = None) -> Found:
+    """Find the energy scale of bare counts.
+
+    Parameters
+    ----------
+    counts : ndarray, shape (n_channels,)
+    instrument : Instrument
+        Its source and detector are used as far as they are stated.
+    end_kev : float, optional
+        The source's end point (tube voltage), keV; the instrument's own if not given.
+
+    Returns
+    -------
+    Found
+
+    Raises
+    ------
+    Untrustworthy
+        If there are too few peaks, nothing explains them, or two scales explain them equally well.
+    """
+    search = Search(counts, instrument, end_kev or instrument.voltage_kv)
+    return decide(search, search_trials(search))
+
+
+def search_trials(search: Search, extra: tuple[EnergyScale, ...] = ()) -> list[Trial]:
+    """Try scales; refuse when there is nothing to try them on."""
+    if len(search.real) < 2:
+        raise Untrustworthy(f"no energy scale: {len(search.real)} peaks stand out, which is too few to find it; give the scale")
+    trials = search.best(extra)
+    if not trials:
+        raise Untrustworthy("no energy scale: no scale puts the peaks at possible widths below the source's end; give the scale")
+    return trials
+
+
+def decide(search: Search, trials: list[Trial]) -> Found:
+    """Accept the best trial if it is well ahead."""
+    best = trials[0]
+    rival = next((t for t in trials[1:] if different(t.scale, best.scale)), None)
+    lead = np.inf if rival is None else rival.score - best.score
+    if best.explained < LEAST_EXPLAINED or len(best.chosen) == 0:
+        raise Untrustworthy("no energy scale: no set of element lines explains the peaks; give the scale or one known element")
+    if rival is not None and lead < LEAST_LEAD + LEAST_LEAD_SHARE * abs(best.score):
+        raise Untrustworthy(
+            f"no energy scale: two explain the peaks equally well: {_words(search, best)}, or {_words(search, rival)}; "
+            "give the scale or one known element"
+        )
+    covariance = search.bench.step(best)[1]
+    return Found(
+        best.scale, best.resolution(search.fano, search.pair_ev), float(np.sqrt(covariance[0, 0])),
+        float(np.sqrt(covariance[1, 1])), None if rival is None else rival.scale, float(lead), best.explained,
+        tuple(names_of(search, best)), tuple(search.peaks),
+    )  # fmt: skip
+
+
+def names_of(search: Search, trial: Trial, most: int = 5) -> list[str]:
+    """Names of what explains the most counts."""
+    order = np.argsort(-trial.areas[:-1])[:most]
+    return [search.patterns.names[trial.chosen[i]] for i in order]
+
+
+def _words(search: Search, trial: Trial) -> str:
+    s = trial.scale
+    return f"{s.gain_kev * 1e3:.4g} eV a channel from {s.offset_kev:+.3f} keV ({', '.join(names_of(search, trial, 3))})"

@@ -1,0 +1,101 @@
+"""A spectrum summed into about three bins per FWHM, its continuum clipped off: what scales are tried on."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from xrfid.prepare.peaks import Widths
+from xrfid.prepare.snip import smoothed, snip
+
+BINS_PER_FWHM = 3.0
+SYSTEMATIC = 0.04
+"""Relative misfit to expect of patterns drawn without tails, matrix and exact widths."""
+_CLIP_BINS = 5
+_HAT_BINS = 30.0
+_MOST_BINS = 1200
+
+
+@dataclass(frozen=True, eq=False)
+class Reduced:
+    """Net counts in bins.
+
+    Attributes
+    ----------
+    edges : ndarray, shape (n + 1,)
+        Bin boundaries in channels (fractional: ``first - 0.5``).
+    counts, net, variance : ndarray, shape (n,)
+        Counts, counts less the clipped continuum, and the variance of the net counts.
+    hats : ndarray, shape (n_hats, n)
+        Smooth functions that mend the clipped continuum.
+    pile_up : ndarray, shape (2 n_pile - 1,)
+        Net counts folded with themselves, on the even grid of `pile_step` channels.
+    """
+
+    edges: NDArray[np.float64]
+    counts: NDArray[np.float64]
+    net: NDArray[np.float64]
+    variance: NDArray[np.float64]
+    hats: NDArray[np.float64]
+    pile_up: NDArray[np.float64]
+    pile_step: int
+
+    @property
+    def centres(self) -> NDArray[np.float64]:
+        """Bin centres in channels."""
+        return 0.5 * (self.edges[1:] + self.edges[:-1])
+
+    def pile_column(self, offset_in_channels: float) -> NDArray[np.float64]:
+        """Sum peaks for an energy of channel 0 of so many channels, shape (n,), greatest value 1.
+
+        Two photons in channels a and b add up to channel ``a + b + offset / gain``.
+        """
+        at = (self.centres - offset_in_channels) / self.pile_step
+        density = np.interp(at, np.arange(self.pile_up.size), self.pile_up, left=0.0, right=0.0)
+        column = density * np.diff(self.edges)
+        return np.asarray(column / max(float(column.max()), 1e-12))
+
+
+def reduce(counts: NDArray[np.float64], widths: Widths) -> Reduced:
+    """Sum a spectrum into bins and clip its continuum off."""
+    starts = _starts(counts, widths)
+    in_bin = np.add.reduceat(counts[: starts[-1]], starts[:-1])
+    per_channel = in_bin / np.diff(starts)
+    clipped = snip(smoothed(per_channel, 3.0), np.full(per_channel.size, _CLIP_BINS)) * np.diff(starts)
+    net = in_bin - clipped
+    level = smoothed(in_bin, 3.0)
+    variance = np.maximum(level, 1.0) + (SYSTEMATIC * np.maximum(net, 0.0)) ** 2
+    step = max(int(np.min(np.diff(starts))), 1)
+    fine = np.interp(np.arange(0, starts[-1], step), 0.5 * (starts[1:] + starts[:-1]) - 0.5,
+                     np.maximum(net, 0.0) / np.diff(starts))  # fmt: skip
+    return Reduced(starts - 0.5, in_bin, net, variance, _hats(in_bin.size), _self_folded(fine), step)
+
+
+def _starts(counts: NDArray[np.float64], widths: Widths) -> NDArray[np.intp]:
+    """Boundaries of the bins: to a fifth beyond the last counts, the overflow channel left out."""
+    n = counts.size
+    if n > 64 and counts[n - 1] > 5.0 * (counts[n - 8 : n - 1].max() + 3.0):
+        n -= 1
+    total = np.cumsum(counts[:n])
+    last = int(np.searchsorted(total, total[-1] - max(3.0, 2e-5 * total[-1]))) + 1
+    last = min(int(1.2 * last) + 16, n)
+    starts, least = [0], last / _MOST_BINS
+    while starts[-1] < last:
+        step = max(int(max(float(widths.fwhm(starts[-1])) / BINS_PER_FWHM, least)), 1)
+        starts.append(min(starts[-1] + step, last))
+    return np.array(starts, dtype=np.intp)
+
+
+def _hats(n: int) -> NDArray[np.float64]:
+    knots = np.linspace(0, n - 1, max(int(n / _HAT_BINS), 2) + 1)
+    distance = np.abs(np.arange(n)[None, :] - knots[:, None]) / (knots[1] - knots[0])
+    return np.asarray(np.maximum(1.0 - distance, 0.0))
+
+
+def _self_folded(values: NDArray[np.float64]) -> NDArray[np.float64]:
+    size = 1 << int(math.ceil(math.log2(2 * values.size)))
+    spectrum = np.fft.rfft(values, size)
+    return np.maximum(np.fft.irfft(spectrum * spectrum, size)[: 2 * values.size - 1], 0.0)
