@@ -106,6 +106,7 @@ def test_proof_has_a_panel_for_each_group(steel):
     labels = [t.get_text() for t in axes[0].get_legend().get_texts()]
     assert labels == ["what it explains", "best without it", "model", "counts"]
     assert axes[1].get_xlim()[0] < 17.44 < axes[1].get_xlim()[1]
+    assert [len(ax.child_axes[0].get_lines()) for ax in axes] == [2, 2, 2]
     axes[0].figure.canvas.draw()
     title = axes[0].figure.texts[0].get_window_extent()
     assert not axes[0].get_legend().get_window_extent().overlaps(title)
@@ -133,6 +134,11 @@ def test_scale_residuals_name_their_lines(steel):
     assert [t.get_text() for t in ax.texts] == ["Cr Kα", "Fe Kα", "Ni Kα", "Mo Kα"]
     ax.figure.canvas.draw()
     assert overlaps(ax.texts) == []
+
+
+def test_a_scale_that_rests_on_no_line_says_so(steel):
+    ax = draw_scale_residuals(replace(steel, calibration=replace(steel.calibration, residuals=())))
+    assert [t.get_text() for t in ax.texts] == ["no line was used for this scale"]
 
 
 def test_overview(make_steel):

@@ -54,3 +54,18 @@ def test_significance(value, text):
 )
 def test_line_names(name, text):
     assert wording.line_name(name) == text
+
+
+@pytest.mark.parametrize(
+    ("paths", "names"),
+    [
+        (["a.msa", "b.msa"], ["a.msa", "b.msa"]),
+        (["/data/run/a.msa", "/data/run/b.msa"], ["a.msa", "b.msa"]),
+        (["run/1/a.msa", "run/12/a.msa"], ["1/a.msa", "12/a.msa"]),
+        (["run/a.msa", "a.msa"], ["run/a.msa", "a.msa"]),
+        (["run/a.msa"], ["run/a.msa"]),
+        (["/a.msa", "/b/a.msa"], ["/a.msa", "/b/a.msa"]),
+    ],
+)
+def test_common_folders_are_left_out(make_steel, paths, names):
+    assert wording.short_names([make_steel(p) for p in paths]) == names

@@ -40,7 +40,7 @@ def single_axes(width_in: float, height_in: float, above_in: float = 0.4) -> Axe
     """Return the only axes of a new figure, margins in inches."""
     figure = new_figure(width_in, height_in)
     return figure.add_axes(
-        (0.62 / width_in, 0.5 / height_in, 1 - 0.8 / width_in, 1 - (0.5 + above_in) / height_in)
+        (0.75 / width_in, 0.5 / height_in, 1 - 0.93 / width_in, 1 - (0.5 + above_in) / height_in)
     )
 
 

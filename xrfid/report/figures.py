@@ -74,6 +74,8 @@ def draw_proof(
 ) -> tuple[Axes, ...]:
     """Draw, around each line group of `element`, the counts and the best models with and without it.
 
+    Below each panel: what the two models leave of the counts, in standard deviations.
+
     Parameters
     ----------
     identification : Identification
@@ -81,7 +83,8 @@ def draw_proof(
     element : str
         Symbol of an element among the findings.
     axes : sequence of Axes, optional
-        One for each panel, left to right; panels beyond them are left out.
+        One for each panel, left to right; panels beyond them are left out. The residuals hang below each:
+        leave half of its height free there.
 
     Raises
     ------
@@ -103,6 +106,7 @@ def draw_proof(
         for panel, ax in zip(panels, used, strict=False):
             _proof_panel(panel, ax)
         used[0].set_ylabel("counts per channel")
+        used[0].child_axes[0].set_ylabel("σ")
         used[0].legend(
             loc="lower left", bbox_to_anchor=(0.0, 1.13), ncols=4, borderaxespad=0.0, borderpad=0.0,
             handlelength=2.6, columnspacing=1.4,
@@ -124,6 +128,9 @@ def draw_scale_residuals(identification: Identification, axes: Axes | None = Non
             named.append(
                 Mark(f"{element} {wording.line_name(group)}", energy, residual + sigma, 1.0, "sample")
             )
+        if not used.residuals:
+            ax.text(0.5, 0.6, "no line was used for this scale", transform=ax.transAxes, ha="center")
+            ax.set_xticks([])
         ax.set_xlabel("energy (keV)")
         ax.set_ylabel("line minus scale (eV)")
         ax.margins(x=0.08, y=0.15)
@@ -152,7 +159,7 @@ def draw_overview(identifications: Sequence[Identification], axes: Axes | None =
                     ax, elements.index(finding.element), row, finding.verdict, finding.evidence.significance
                 )
         ax.set_xticks(range(len(elements)), elements, fontweight="bold")
-        names = [drawable(wording.subject(i)) for i in identifications]
+        names = [drawable(name) for name in wording.short_names(identifications)]
         ax.set_yticks(
             range(len(names)), [n if len(n) <= 32 else "…" + n[-31:] for n in names], parse_math=False
         )
@@ -309,18 +316,23 @@ def _residuals(identification: Identification, ax: Axes) -> None:
 
 def _proof_axes(panels: int, title: str, significance: float) -> list[Axes]:
     width = 1.0 + 2.6 * max(panels, 2)
-    figure = new_figure(width, 3.3)
+    figure = new_figure(width, 4.0)
     axes = list(np.ravel(figure.subplots(1, panels, squeeze=False)))
-    figure.subplots_adjust(left=0.62 / width, right=0.985, top=0.72, bottom=0.14, wspace=0.3)
+    figure.subplots_adjust(left=0.62 / width, right=0.985, top=0.77, bottom=0.35, wspace=0.3)
     said = f"{title}: {wording.significance(significance)} sigma"
-    figure.text(0.12 / width, 0.965, said, va="top", fontsize=11, fontweight="bold")
+    figure.text(0.12 / width, 0.97, said, va="top", fontsize=11, fontweight="bold")
     return axes
 
 
 def _proof_panel(panel: ProofPanel, ax: Axes) -> None:
     energy = panel.energy_kev
     ax.fill_between(
-        energy, panel.without, panel.model, color=style.ACCENT_WASH, linewidth=0, label="what it explains"
+        energy,
+        panel.without,
+        np.maximum(panel.model, panel.without),
+        color=style.ACCENT_WASH,
+        linewidth=0,
+        label="what it explains",
     )
     ax.errorbar(energy, panel.counts, np.sqrt(np.maximum(panel.counts, 1.0)), fmt=".", markersize=3.2,
                 color=style.INK, ecolor=style.SOFT, elinewidth=0.7, label="counts")  # fmt: skip
@@ -335,7 +347,16 @@ def _proof_panel(panel: ProofPanel, ax: Axes) -> None:
         ax.axvline(at, **style.LEADER.matplotlib(), zorder=0)
     ax.locator_params(axis="x", nbins=4)
     ax.locator_params(axis="y", nbins=5)
-    ax.set_xlabel("keV")
+    ax.tick_params(labelbottom=False)
+    below = ax.inset_axes((0.0, -0.42, 1.0, 0.36), sharex=ax)
+    with_it, without_it = panel.residuals
+    below.axhspan(-3.0, 3.0, color=style.WASH, linewidth=0)
+    below.plot(energy, without_it, **style.WITHOUT.matplotlib())
+    below.plot(energy, with_it, **style.MODEL.matplotlib())
+    below.set_ylim(-panel.residual_reach, panel.residual_reach)
+    below.set_yticks([-3, 3])
+    below.tick_params(labelbottom=True)
+    below.set_xlabel("keV")
 
 
 def _overview_mark(ax: Axes, column: int, row: int, verdict: Verdict, significance: float) -> None:

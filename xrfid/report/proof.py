@@ -34,6 +34,19 @@ class ProofPanel:
     expected: str = ""
 
     @property
+    def residuals(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Counts minus model, and minus the model without the element, in standard deviations."""
+        with_it, without_it = (
+            (self.counts - m) / np.sqrt(np.maximum(m, 1.0)) for m in (self.model, self.without)
+        )
+        return with_it, without_it
+
+    @property
+    def residual_reach(self) -> float:
+        """How far up and down to show residuals: to the largest one, within 4 to 12 standard deviations."""
+        return float(np.clip(1.1 * np.abs(np.concatenate(self.residuals)).max(), 4.0, 12.0))
+
+    @property
     def counts_range(self) -> tuple[float, float]:
         """Range of counts to show: what lies on the lines; a high neighbour runs out of the picture."""
         low, high = self.energies_kev[0] - 1.2 * self.fwhm_kev, self.energies_kev[-1] + 1.2 * self.fwhm_kev

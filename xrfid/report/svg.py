@@ -77,25 +77,24 @@ class _Frame:
         return out
 
 
-def proof_svg(panel: ProofPanel, width: int = 300, height: int = 190) -> str:
-    """Return one proof panel as an SVG element of `width` by `height` units."""
-    energy = panel.energy_kev
-    frame = _Frame(
-        (44, 24, width - 8, height - 22), (float(energy[0]), float(energy[-1])), panel.counts_range
-    )
+def proof_svg(panel: ProofPanel, width: int = 300, height: int = 240) -> str:
+    """Return one proof panel, counts above and residuals below, as an SVG element of this size."""
+    ends = (float(panel.energy_kev[0]), float(panel.energy_kev[-1]))
+    above = _Frame((44, 24, width - 8, height - 82), ends, panel.counts_range)
+    reach = panel.residual_reach
+    below = _Frame((44, height - 72, width - 8, height - 22), ends, (-reach, reach))
+    bold = f'font-weight="bold" font-size="11" fill="{style.INK}"'
     out = [_open(width, height, f"{panel.title}: counts, model, and best model without the element")]
-    out.append(
-        f'<text x="2" y="12" font-weight="bold" font-size="11" fill="{style.INK}">'
-        f"{escape(panel.title)}</text>"
-    )
+    out.append(f'<text x="2" y="12" {bold}>{escape(panel.title)}</text>')
     if panel.net:
         said = f"{panel.net} counts, expected {panel.expected}"
-        out.append(
-            f'<text x="{width - 8}" y="12" text-anchor="end" font-size="9.5" fill="{style.SOFT}">'
-            f"{said}</text>"
-        )
-    out += [frame.clipped(_proof_curves(frame, panel))]
-    out += frame.axes(_ticks(*frame.x_range, 4), _ticks(*frame.y_range, 4))
+        grey = f'text-anchor="end" font-size="9.5" fill="{style.SOFT}"'
+        out.append(f'<text x="{width - 8}" y="12" {grey}>{said}</text>')
+    out.append(above.clipped(_proof_curves(above, panel)))
+    out.append(below.clipped(_proof_residuals(below, panel)))
+    out += above.axes((), _ticks(*above.y_range, 4))
+    out += below.axes(_ticks(*below.x_range, 4), (-3.0, 3.0))
+    out.append(f'<text x="2" y="{0.5 * (below.top + below.bottom) + 3.5:.1f}" {_TEXT}>σ</text>')
     return "".join([*out, "</svg>"])
 
 
@@ -160,7 +159,8 @@ def _open(width: int, height: int, label: str) -> str:
 def _proof_curves(frame: _Frame, panel: ProofPanel) -> str:
     energy = panel.energy_kev
     guides = "".join(f"M{at:.1f} {frame.top}V{frame.bottom}" for at in frame.x(panel.energies_kev))
-    area = frame.path(np.r_[energy, energy[::-1]], np.r_[panel.model, panel.without[::-1]])
+    gain = np.maximum(panel.model, panel.without)
+    area = frame.path(np.r_[energy, energy[::-1]], np.r_[gain, panel.without[::-1]])
     dots = "".join(f"M{x:.1f} {y:.1f}h0" for x, y in zip(frame.x(energy), frame.y(panel.counts), strict=True))
     return (
         f'<path d="{guides}" {style.LEADER.svg()}/>'
@@ -169,6 +169,17 @@ def _proof_curves(frame: _Frame, panel: ProofPanel) -> str:
         f'<path d="{frame.path(energy, panel.without)}" {style.WITHOUT.svg()}/>'
         f'<path d="{frame.path(energy, panel.model)}" {style.MODEL.svg()}/>'
         f'<path d="{dots}" stroke="{style.INK}" stroke-width="3" stroke-linecap="round"/>'
+    )
+
+
+def _proof_residuals(frame: _Frame, panel: ProofPanel) -> str:
+    with_it, without_it = panel.residuals
+    top, bottom = frame.y([3.0, -3.0])
+    band = f'x="{frame.left}" y="{top:.1f}" width="{frame.right - frame.left}" height="{bottom - top:.1f}"'
+    return (
+        f'<rect {band} fill="{style.WASH}"/>'
+        f'<path d="{frame.path(panel.energy_kev, without_it)}" {style.WITHOUT.svg()}/>'
+        f'<path d="{frame.path(panel.energy_kev, with_it)}" {style.MODEL.svg()}/>'
     )
 
 

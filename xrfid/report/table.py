@@ -46,7 +46,7 @@ def render_comparison(identifications: Sequence[Identification], console: Consol
     """Print which elements each of several spectra shows: one row a spectrum, one column an element."""
     writer = _Writer(console)
     elements = shown_elements(identifications)
-    names = [wording.subject(i) for i in identifications]
+    names = wording.short_names(identifications)
     widest = max(12, min(30, console.width // 3, max(map(len, names), default=12)))
     per_block = max(1, (console.width - widest - 2) // 4)
     writer.heading(f"{len(identifications)} spectra, {len(elements)} elements")

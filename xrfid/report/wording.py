@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
+from itertools import takewhile
 
 from xrfid.identify.result import Finding, Identification, Verdict
 
@@ -65,6 +67,16 @@ def subject(identification: Identification) -> str:
     if source.path:
         return f"{source.path}:{source.dataset}" if source.dataset else source.path
     return source.title or "spectrum"
+
+
+def short_names(identifications: Sequence[Identification]) -> list[str]:
+    """Return what to call each of several spectra: its name without the folders that all have in common."""
+    names = [subject(i) for i in identifications]
+    folders = [name.rpartition("/")[0].split("/") for name in names]
+    common = [same[0] for same in takewhile(lambda x: len(set(x)) == 1, zip(*folders, strict=False))]
+    if len(names) < 2 or common == [""]:
+        return names
+    return [name[sum(len(folder) + 1 for folder in common) :] for name in names]
 
 
 def source_line(identification: Identification, space: str = " ") -> str:
