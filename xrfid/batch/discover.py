@@ -35,7 +35,7 @@ _REACH_FWHM = 1.0
 
 @dataclass(frozen=True, slots=True)
 class Hidden:
-    """An element that the sum does not show: its series, and where it was found (indices among all points)."""
+    """An element that the sum does not show: its series, and the points (indices among all) it was found in."""
 
     element: str
     series: tuple[SeriesKey, ...]
@@ -51,7 +51,9 @@ def sampled_blocks(stack: Stack) -> NDArray[np.int64]:
     return np.unique(np.linspace(0, stack.n_blocks - 1, wanted).round().astype(np.int64))
 
 
-def sample_sum(stack: Stack, blocks: NDArray[np.int64], progress: Progress) -> tuple[NDArray[np.float64], int]:
+def sample_sum(
+    stack: Stack, blocks: NDArray[np.int64], progress: Progress
+) -> tuple[NDArray[np.float64], int]:
     """Add up the good spectra of some blocks; return the sum, shape (n_channels,), and how many they are.
 
     Raises
@@ -66,13 +68,17 @@ def sample_sum(stack: Stack, blocks: NDArray[np.int64], progress: Progress) -> t
         summed, n = summed + part, n + good
         progress("looking at a sample", i + 1, len(blocks))
     if not summed.any():
-        raise InputError(f"{stack.place.path}:{stack.names[0]}", "holds no counts that can be used", "is this the run?")
+        raise InputError(
+            f"{stack.place.path}:{stack.names[0]}", "holds no counts that can be used", "is this the run?"
+        )
     return summed, n
 
 
 def sum_spectrum(stack: Stack, summed: NDArray[np.float64], title: str) -> Spectrum:
     """Turn a sum of points into a spectrum of this run."""
-    return Spectrum(counts=summed, scale=stack.scale, title=title, path=stack.place.path, dataset=",".join(stack.names))
+    return Spectrum(
+        counts=summed, scale=stack.scale, title=title, path=stack.place.path, dataset=",".join(stack.names)
+    )
 
 
 def restricted(settings: Settings, elements: tuple[str, ...]) -> Settings:
@@ -140,25 +146,27 @@ def hidden_elements(
         Series that are fitted already.
     """
     groups = list(_groups(judged, np.unique(holders[holders >= 0]), work))
-    stricter = replace(settings, false_identification_level=settings.false_identification_level / max(len(groups), 1))
+    stricter = replace(
+        settings, false_identification_level=settings.false_identification_level / max(len(groups), 1)
+    )
     found: dict[str, Hidden] = {}
     for i, (where, points) in enumerate(groups):
         progress("looking at points that stand out", i, len(groups))
         spectrum = sum_spectrum(stack, stack.spectra(points).sum(axis=0), where)
         try:
             seen = search(spectrum.with_scale(work.setting.scale), instrument, stricter)
-            names = assemble(seen).identified
         except Untrustworthy:
             continue  # too few counts to say anything
-        for name in names:
-            series = tuple(k for k in seen.fit.keys if k.element == name and k not in known)
-            fresh = series and not any(k.element == name for k in known)
-            if fresh and name not in found:
-                found[name] = Hidden(name, series, where, tuple(int(p) for p in points))
+        fresh = {k.element for k in seen.fit.keys} - {k.element for k in known} - found.keys()
+        for name in sorted(fresh & set(assemble(seen).identified) if fresh else ()):
+            series = tuple(k for k in seen.fit.keys if k.element == name)
+            found[name] = Hidden(name, series, where, tuple(int(p) for p in points))
     return list(found.values())
 
 
-def _groups(judged: Judgement, holders: NDArray[np.int64], work: Work) -> Iterator[tuple[str, NDArray[np.int64]]]:
+def _groups(
+    judged: Judgement, holders: NDArray[np.int64], work: Work
+) -> Iterator[tuple[str, NDArray[np.int64]]]:
     """Points that stand out together: by the energy of their excess, then those that hold maxima."""
     left = judged.deviating()
     for _ in range(_MOST_CLUSTERS):

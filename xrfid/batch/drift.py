@@ -24,7 +24,7 @@ _MOST_KEV, _MOST_GAIN = 0.2, 0.02
 
 @dataclass(frozen=True, slots=True)
 class Drift:
-    """Shift of a block's lines at 6 keV (keV) and per keV of distance from there, with standard uncertainties."""
+    """Shift of a block's lines at 6 keV (keV) and per keV of distance from there, with uncertainties."""
 
     offset_kev: float = 0.0
     gain: float = 0.0
@@ -71,7 +71,9 @@ def block_drift(plan: Plan, summed: NDArray[np.float64], n_points: int) -> tuple
     for _ in range(_STEPS):
         moved = plan.shifted(found.offset_kev, found.gain)
         step = _estimate(moved, mean, n_points)
-        found = Drift(found.offset_kev + step.offset_kev, found.gain + step.gain, step.offset_sigma_kev, step.gain_sigma)
+        found = Drift(
+            found.offset_kev + step.offset_kev, found.gain + step.gain, step.offset_sigma_kev, step.gain_sigma
+        )
         if not found.credible:
             return found, plan
         if abs(step.offset_kev) < 0.25 * _MATTERS_KEV:

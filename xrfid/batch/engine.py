@@ -58,10 +58,11 @@ class BlockResult:
     @classmethod
     def empty(cls, n: int, plan: Plan, known: NDArray[np.float32]) -> BlockResult:
         """Return a result to be filled."""
-        nothing = [np.full((plan.n_series, n), np.nan, np.float32) for _ in range(2)]
-        nothing += [np.full(n, np.nan, np.float32) for _ in range(3)]
-        return cls(*nothing, np.zeros(n, np.uint8), np.zeros(plan.n_channels), known.copy(),
-                   np.full(plan.n_channels, -1, np.int64))  # fmt: skip
+        area, sigma = np.full((2, plan.n_series, n), np.nan, np.float32)
+        chi2, residual, residual_kev = np.full((3, n), np.nan, np.float32)
+        status, summed = np.zeros(n, np.uint8), np.zeros(plan.n_channels)
+        nobody = np.full(plan.n_channels, -1, np.int64)
+        return cls(area, sigma, chi2, residual, residual_kev, status, summed, known.copy(), nobody)
 
 
 @contextmanager
@@ -105,7 +106,9 @@ def fit_block(
     return result
 
 
-def add_up(layers: list[NDArray[Any]], lost: NDArray[np.bool_], signed: bool) -> tuple[NDArray[np.float64], int]:
+def add_up(
+    layers: list[NDArray[Any]], lost: NDArray[np.bool_], signed: bool
+) -> tuple[NDArray[np.float64], int]:
     """Sum of a block's good spectra, shape (n_channels,), and their number."""
     status = np.where(lost, UNREADABLE, GOOD).astype(np.uint8)
     buffer = np.zeros((_ROWS, layers[0].shape[1]), np.float32)
@@ -120,7 +123,7 @@ def add_up(layers: list[NDArray[Any]], lost: NDArray[np.bool_], signed: bool) ->
 
 def _portions(plan: Plan, layers: list[NDArray[Any]], result: BlockResult, signed: bool
               ) -> Iterator[tuple[slice, NDArray[np.float32], NDArray[np.float32]]]:  # fmt: skip
-    """A few hundred spectra at a time, as 32-bit numbers, with their bands."""
+    """Yield a few hundred spectra at a time, as 32-bit numbers, with their bands."""
     buffer = np.zeros((_ROWS, plan.n_padded), np.float32)
     ones = np.ones(plan.band, np.float32)
     n, inside = result.status.size, slice(*plan.bands)
@@ -163,7 +166,9 @@ def _accumulate(y: NDArray[np.float32], rows: slice, result: BlockResult) -> Non
     result.holder[raised] = rows.start + np.argmax(inner[:, raised], axis=0)
 
 
-def _fit_rows(plan: Plan, y: NDArray[np.float32], bands: NDArray[np.float32], rows: slice, result: BlockResult) -> None:
+def _fit_rows(
+    plan: Plan, y: NDArray[np.float32], bands: NDArray[np.float32], rows: slice, result: BlockResult
+) -> None:
     """Areas, uncertainties and goodness of fit of some spectra."""
     coefficients = y @ plan.projection
     area = coefficients[:, : plan.n_series]

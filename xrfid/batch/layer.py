@@ -11,7 +11,7 @@ import itertools
 import os
 import zlib
 from collections.abc import Callable, Iterator
-from typing import Any
+from typing import Any, cast
 
 import h5py
 import numpy as np
@@ -27,7 +27,7 @@ def _inflate() -> Unpack:
         from isal import isal_zlib
     except ImportError:
         return lambda packed, size: zlib.decompress(packed, bufsize=size)
-    return lambda packed, size: bytes(isal_zlib.decompress(packed, bufsize=size))
+    return cast("Unpack", lambda packed, size: isal_zlib.decompress(packed, bufsize=size))
 
 
 _DEFLATE, _SHUFFLE = h5py.h5z.FILTER_DEFLATE, h5py.h5z.FILTER_SHUFFLE
@@ -53,7 +53,12 @@ class Layer:
         self.dtype = np.dtype(dataset.dtype)
         self.chunks: tuple[int, ...] | None = None if dataset.chunks is None else dataset.chunks[own:]
         self._inflate = _inflate()
-        plain = handle >= 0 and not dataset.is_virtual and not dataset.external and dataset.file.userblock_size == 0
+        plain = (
+            handle >= 0
+            and not dataset.is_virtual
+            and not dataset.external
+            and dataset.file.userblock_size == 0
+        )
         self._offset = dataset.id.get_offset() if plain and dataset.chunks is None else None
         self._filters = _filters(dataset) if plain and dataset.chunks is not None else None
 
@@ -103,7 +108,9 @@ class Layer:
         flags = lost.reshape(-1)
         per_piece = int(np.prod(extent[cut:-1], dtype=np.int64))
         for piece, lead in enumerate(np.ndindex(*extent[:cut])):
-            at = [whole[a].start + lead[a] for a in range(cut)] + [whole[a].start for a in range(cut, len(full))]
+            at = [whole[a].start + lead[a] for a in range(cut)] + [
+                whole[a].start for a in range(cut, len(full))
+            ]
             offset = self._offset + int(np.dot(at, strides)) * self.dtype.itemsize
             target = rows[piece * per_piece : (piece + 1) * per_piece]
             got = _read_into(self._handle, target, offset)
@@ -137,7 +144,11 @@ class Layer:
         for position in range(len(self._filters) - 1, -1, -1):
             if info.filter_mask & (1 << position):
                 continue
-            packed = self._inflate(packed, size) if self._filters[position] == _DEFLATE else _unshuffled(packed, self.dtype)
+            packed = (
+                self._inflate(packed, size)
+                if self._filters[position] == _DEFLATE
+                else _unshuffled(packed, self.dtype)
+            )
         return np.frombuffer(packed, self.dtype).reshape(shape)
 
     def _through_library(self, whole: Box, extent: tuple[int, ...], lost: NDArray[np.bool_]) -> NDArray[Any]:
@@ -150,7 +161,9 @@ class Layer:
             counts[...] = 0
         pieces = self._dataset.chunks or (1,) * (len(extent) - 1) + extent[-1:]
         for _, _, target in _overlaps(whole, pieces, self._dataset.shape):
-            where = tuple(slice(w.start + t.start, w.start + t.stop) for w, t in zip(whole, target, strict=True))
+            where = tuple(
+                slice(w.start + t.start, w.start + t.stop) for w, t in zip(whole, target, strict=True)
+            )
             try:
                 counts[target] = self._dataset[where]
             except OSError:
@@ -172,12 +185,12 @@ def _damaged(error: Exception) -> bool:
 
 def _unshuffled(packed: bytes, dtype: np.dtype[Any]) -> bytes:
     """Undo the byte shuffle: all first bytes, then all second bytes, ... back to numbers."""
-    return np.frombuffer(packed, np.uint8).reshape(dtype.itemsize, -1).T.tobytes()
+    return bytes(np.frombuffer(packed, np.uint8).reshape(dtype.itemsize, -1).T.tobytes())
 
 
 def _read_into(handle: int, target: NDArray[Any], offset: int) -> int:
     """Read until the target is full or the file ends; return the bytes read."""
-    view = memoryview(target.view(np.uint8).reshape(-1))
+    view = target.view(np.uint8).reshape(-1).data
     got = 0
     while got < len(view):
         n = os.preadv(handle, [view[got:]], offset + got)

@@ -108,8 +108,8 @@ def find_datasets(file: h5py.File, path: Path, name: str | None) -> tuple[str, .
     largest = max(file[s].size for s in pool)
     best = [s for s in pool if file[s].size == largest]
     if len(best) > 1:
-        raise InputError(str(path), f"{len(best)} datasets could be the run: {', '.join(best[:6])}",
-                         f"give --dataset {best[0]}, or --dataset {best[0]},{best[1]} to sum them")  # fmt: skip
+        remedy = f"give --dataset {best[0]}, or --dataset {best[0]},{best[1]} to sum them"
+        raise InputError(str(path), f"{len(best)} datasets could be the run: {', '.join(best[:6])}", remedy)
     return (best[0],)
 
 
@@ -125,7 +125,9 @@ def _stacks(file: h5py.File) -> list[str]:
 
 
 def _is_stack(item: h5py.Dataset) -> bool:
-    return item.dtype.kind in "iuf" and item.ndim >= 2 and item.shape[-1] >= _FEWEST_CHANNELS and item.size > 0
+    return (
+        item.dtype.kind in "iuf" and item.ndim >= 2 and item.shape[-1] >= _FEWEST_CHANNELS and item.size > 0
+    )
 
 
 def _is_signal(item: h5py.Dataset) -> bool:
@@ -143,7 +145,7 @@ def _named(file: h5py.File, path: Path, name: str, stacks: list[str]) -> str:
 
 
 def energy_axis(dataset: h5py.Dataset) -> EnergyScale | None:
-    """Return the scale of a dataset's last axis, read from the axis its group names or from a neighbour "energy"."""
+    """Return the scale of a dataset's last axis, from the axis its group names or a neighbour "energy"."""
     group, n = dataset.parent, dataset.shape[-1]
     axes = group.attrs.get("axes")
     names = [_text(a) for a in np.atleast_1d(axes)] if axes is not None else []
@@ -174,4 +176,8 @@ def _text(value: Any) -> str:
     """Turn what HDF5 attributes hold into text."""
     if isinstance(value, np.ndarray) and value.size == 1:
         value = value.reshape(-1)[0]
-    return value.decode("utf-8", "replace") if isinstance(value, bytes) else str(value if value is not None else "")
+    return (
+        value.decode("utf-8", "replace")
+        if isinstance(value, bytes)
+        else str(value if value is not None else "")
+    )

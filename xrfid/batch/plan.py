@@ -98,7 +98,9 @@ class Plan:
     def projection(self) -> NDArray[np.float32]:
         """Coefficients from channels, shape (n_padded, n_columns): the grouping folded in."""
         out = np.zeros((self.n_padded, self.columns.shape[0]), dtype=np.float32)
-        out[self.starts[0] : self.starts[-1]] = np.repeat(self.grouped_projection, np.diff(self.starts), axis=1).T
+        out[self.starts[0] : self.starts[-1]] = np.repeat(
+            self.grouped_projection, np.diff(self.starts), axis=1
+        ).T
         return out
 
     @cached_property
@@ -120,22 +122,22 @@ class Plan:
     @cached_property
     def band_columns(self) -> NDArray[np.float32]:
         """Columns summed over bands, shape (n_columns, n_bands)."""
-        return self._banded(self.columns).astype(np.float32)
+        return np.asarray(self._banded(self.columns), dtype=np.float32)
 
     @cached_property
     def band_mean(self) -> NDArray[np.float32]:
         """Mean point summed over bands, shape (n_bands,)."""
-        return self._banded(self.mean[None])[0].astype(np.float32)
+        return np.asarray(self._banded(self.mean[None])[0], dtype=np.float32)
 
     @cached_property
     def band_kev(self) -> NDArray[np.float32]:
         """Energies between neighbouring bands, keV, shape (n_bands - 1,)."""
         inner = np.arange(self.bands[0] + 1, self.bands[1]) * self.band
-        return np.interp(inner, self.starts, self.edges_kev).astype(np.float32)
+        return np.asarray(np.interp(inner, self.starts, self.edges_kev), dtype=np.float32)
 
     @cached_property
     def freedom(self) -> float:
-        """Expected sum of squared band residuals over their variance: what a reduced chi-square is divided by."""
+        """Expected sum of squared band residuals over their variance; divides the chi-square."""
         first, last = self.bands
         per_channel = np.repeat(self.grouped_projection, np.diff(self.starts), axis=1)
         size = np.repeat(np.diff(self.starts), np.diff(self.starts))
@@ -150,7 +152,8 @@ class Plan:
         """Sum grouped curves over bands, shape (n, n_bands)."""
         first, last = self.bands
         spread = np.array([self.grouping.spread(row, self.n_channels) for row in per_group])
-        return spread[:, first * self.band : last * self.band].reshape(len(spread), last - first, self.band).sum(axis=2)
+        inside = spread[:, first * self.band : last * self.band]
+        return np.asarray(inside.reshape(len(spread), last - first, self.band).sum(axis=2))
 
     def shifted(self, offset_kev: float, gain: float) -> Plan:
         """Return the plan for an energy scale on which every line stands higher.
@@ -178,7 +181,9 @@ def moved_lines(
     from scipy.interpolate import CubicSpline
 
     cumulative = CubicSpline(edges_kev, np.concatenate([[0.0], np.cumsum(column)]))
-    source = np.clip(edges_kev - offset_kev - gain * (edges_kev - GAIN_PIVOT_KEV), edges_kev[0], edges_kev[-1])
+    source = np.clip(
+        edges_kev - offset_kev - gain * (edges_kev - GAIN_PIVOT_KEV), edges_kev[0], edges_kev[-1]
+    )
     return np.diff(cumulative(source))
 
 
@@ -218,13 +223,17 @@ def make_plan(work: Work, n_points: int, extra: tuple[SeriesKey, ...] = ()) -> P
 
 
 def _series_columns(drawn: Ingredients, fit: Fit) -> NDArray[np.float64]:
-    """Unit columns of the series with the tolerances at the values the sum gave them."""
+    """Return unit columns of the series with the tolerances at the values the sum gave them."""
     x, solution = fit.problem.columns, fit.solution.coefficients
     out = []
     for i, key in enumerate(fit.keys):
         column, area = x[i], 1.0
         if fit.areas[key] > _SOLID * fit.sigmas[key]:
-            own = [j for j, label in enumerate(fit.labels) if label[0] in ("share", "shift") and label[1] == str(key)]
+            own = [
+                j
+                for j, label in enumerate(fit.labels)
+                if label[0] in ("share", "shift") and label[1] == str(key)
+            ]
             column = (solution[i] * x[i] + solution[own] @ x[own]) / fit.areas[key]
         shared = shared_nuisances(drawn.columns, {key: area}, [], drawn.tolerances)
         out.append(column + sum(fit.coefficient(*n.label) * n.column for n in shared))
@@ -232,7 +241,7 @@ def _series_columns(drawn: Ingredients, fit: Fit) -> NDArray[np.float64]:
 
 
 def _continuum_columns(drawn: Ingredients, fit: Fit) -> NDArray[np.float64]:
-    """The sum's continuum times a few hat functions, so that each point may bend it; in counts of the sum."""
+    """Return the sum's continuum times a few hat functions, so that each point may bend it."""
     centres = drawn.columns.grouping.centres_kev
     span = float(centres[-1] - centres[0])
     n = int(np.clip(round(span / _CONTINUUM_KNOT_KEV) + 1, 2, _MOST_KNOTS))
@@ -242,13 +251,19 @@ def _continuum_columns(drawn: Ingredients, fit: Fit) -> NDArray[np.float64]:
     return np.asarray(hats * shape)
 
 
-def _other_columns(fit: Fit, series: NDArray[np.float64], continuum: NDArray[np.float64]) -> NDArray[np.float64]:
+def _other_columns(
+    fit: Fit, series: NDArray[np.float64], continuum: NDArray[np.float64]
+) -> NDArray[np.float64]:
     """Scatter of each kind, pile-up and unassigned peaks as the sum shows them; in counts of the sum.
 
     What the tolerances of the scattered lines add goes with the strongest of the scatter columns.
     """
     parts = {name: fit.part(name) for name in ("sum", "partial")}
-    peaks = [fit.coefficient(*label) * fit.problem.columns[i] for i, label in enumerate(fit.labels) if label[0] == "peak"]
+    peaks = [
+        fit.coefficient(*label) * fit.problem.columns[i]
+        for i, label in enumerate(fit.labels)
+        if label[0] == "peak"
+    ]
     areas = np.array([fit.areas[k] for k in fit.keys])
     named = areas @ series + continuum + sum(parts.values()) + sum(peaks, np.zeros_like(continuum))
     scatter = [fit.coefficient(*label) * fit.problem.columns[i]
@@ -256,12 +271,16 @@ def _other_columns(fit: Fit, series: NDArray[np.float64], continuum: NDArray[np.
     if scatter:
         strongest = max(range(len(scatter)), key=lambda i: float(scatter[i].sum()))
         scatter[strongest] = np.maximum(scatter[strongest] + fit.model - named - np.sum(scatter, axis=0), 0.0)
-    seen = [c for c in (*scatter, *parts.values(), *peaks) if c.sum() > 3.0 * np.sqrt(float(np.sum(c * fit.model)) / max(c.sum(), 1e-300))]
+    seen = [
+        c
+        for c in (*scatter, *parts.values(), *peaks)
+        if c.sum() > 3.0 * np.sqrt(float(np.sum(c * fit.model)) / max(c.sum(), 1e-300))
+    ]
     return np.array(seen).reshape(len(seen), continuum.size)
 
 
 def _systematic(plan: Plan, fit: Fit, n_points: int) -> NDArray[np.float64]:
-    """Relative uncertainty that the tolerances leave in each area of the sum beyond its counting statistics."""
+    """Relative uncertainty of each area of the sum that its counting statistics do not explain."""
     counting = np.diag(plan.covariance)[: plan.n_series] * n_points
     areas = np.array([fit.areas[k] for k in fit.keys])
     sigmas = np.array([fit.sigmas[k] for k in fit.keys])

@@ -36,7 +36,7 @@ class Refits:
 
 
 def fit_point(work: Work, keys: tuple[SeriesKey, ...], counts: NDArray[np.float64]) -> Fit:
-    """Fit one point's counts, shape (n_channels,), by Poisson likelihood with non-negative areas and all tolerances."""
+    """Fit one point's counts, shape (n_channels,): Poisson likelihood, areas >= 0, all tolerances."""
     drawn = work.ingredients
     grouped = drawn.columns.grouping.sum(counts)
     share = grouped.sum() / max(float(drawn.counts.sum()), 1e-300)

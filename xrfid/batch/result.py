@@ -54,7 +54,9 @@ class Strongest:
     sigma: float
 
 
-def write_result(part: Path, out: Path, finished: Finished, *, compress: bool, overwrite: bool) -> tuple[Strongest, ...]:
+def write_result(
+    part: Path, out: Path, finished: Finished, *, compress: bool, overwrite: bool
+) -> tuple[Strongest, ...]:
     """Write the result from the complete unfinished one.
 
     Returns
@@ -63,9 +65,11 @@ def write_result(part: Path, out: Path, finished: Finished, *, compress: bool, o
         One for each series, strongest first by area over uncertainty.
     """
     options = {"compression": "gzip", "compression_opts": 4, "shuffle": True} if compress else {}
-    with atomic_output(out, overwrite=overwrite) as beside, h5py.File(part, "r", locking=False) as source, h5py.File(
-        beside, "w", locking=False
-    ) as file:
+    with (
+        atomic_output(out, overwrite=overwrite) as beside,
+        h5py.File(part, "r", locking=False) as source,
+        h5py.File(beside, "w", locking=False) as file,
+    ):
         entry = _group(file, "entry", "NXentry", default="sum_spectrum")
         file.attrs["NX_class"], file.attrs["default"] = "NXroot", "entry"
         entry["title"] = f"areas of {len(finished.names)} series at {math.prod(finished.shape)} points"
@@ -86,7 +90,9 @@ def _group(parent: h5py.Group, name: str, kind: str, **attributes: Any) -> h5py.
     return group
 
 
-def _series(source: h5py.Group, entry: h5py.Group, finished: Finished, options: dict[str, Any]) -> tuple[Strongest, ...]:
+def _series(
+    source: h5py.Group, entry: h5py.Group, finished: Finished, options: dict[str, Any]
+) -> tuple[Strongest, ...]:
     """Copy areas and uncertainties, single fits put in, and note where each series is strongest."""
     series = _group(entry, "series", "NXcollection")
     found = []
@@ -118,8 +124,9 @@ def _slabs(shape: tuple[int, ...], itemsize: int) -> Iterator[tuple[slice, int]]
         yield slice(start, min(start + step, shape[0])), start * per_row
 
 
-def _copy(source: h5py.Dataset, group: h5py.Group, name: str, options: dict[str, Any], edit: Edit | None = None
-          ) -> h5py.Dataset:  # fmt: skip
+def _copy(
+    source: h5py.Dataset, group: h5py.Group, name: str, options: dict[str, Any], edit: Edit | None = None
+) -> h5py.Dataset:
     made = group.create_dataset(name, shape=source.shape, dtype=source.dtype, **options)
     for rows, first in _slabs(source.shape, source.dtype.itemsize):
         slab = source[rows]
@@ -153,7 +160,9 @@ def _fit(source: h5py.Group, entry: h5py.Group, finished: Finished, options: dic
     group["done"].attrs["long_name"] = "1 for each block of points that is fitted"
     group["drift"] = source["drift"][()]
     group["drift"].attrs["columns"] = list(DRIFT_FIELDS)
-    group["drift"].attrs["long_name"] = "shift of each block's lines at 6 keV and per keV of distance from there"
+    group["drift"].attrs["long_name"] = (
+        "shift of each block's lines at 6 keV and per keV of distance from there"
+    )
     refits = _group(group, "refitted", "NXcollection", badly_fitted_points=finished.refits.listed)
     refits["index"] = np.stack(np.unravel_index(finished.refits.points, finished.shape), axis=-1)
     refits["reduced_chi2_before"] = finished.refits.before
@@ -161,7 +170,9 @@ def _fit(source: h5py.Group, entry: h5py.Group, finished: Finished, options: dic
 
 
 def _sum(entry: h5py.Group, finished: Finished) -> None:
-    group = _group(entry, "sum_spectrum", "NXdata", signal="counts", axes="energy", auxiliary_signals=["maximum"])
+    group = _group(
+        entry, "sum_spectrum", "NXdata", signal="counts", axes="energy", auxiliary_signals=["maximum"]
+    )
     group["counts"], group["maximum"] = finished.sums.summed, np.maximum(finished.sums.highest, 0.0)
     group["energy"] = finished.scale.energy_kev(np.arange(finished.sums.summed.size))
     for name, units in (("counts", "counts"), ("maximum", "counts"), ("energy", "keV")):
@@ -174,11 +185,17 @@ def _tables(entry: h5py.Group, finished: Finished, strongest: tuple[Strongest, .
     text = h5py.string_dtype()
     table = _group(entry, "strongest", "NXcollection")
     table.create_dataset("series", data=[s.series for s in strongest], dtype=text)
-    table["index"] = np.array([s.index for s in strongest], np.int64).reshape(len(strongest), len(finished.shape))
+    table["index"] = np.array([s.index for s in strongest], np.int64).reshape(
+        len(strongest), len(finished.shape)
+    )
     table["area"], table["sigma"] = [s.area for s in strongest], [s.sigma for s in strongest]
     hidden = _group(entry, "hidden", "NXcollection", long_name="elements that the sum does not show")
-    hidden.create_dataset("element", data=[h.element for h in finished.hidden], dtype=text, shape=(len(finished.hidden),))
-    hidden.create_dataset("found_in", data=[h.where for h in finished.hidden], dtype=text, shape=(len(finished.hidden),))
+    hidden.create_dataset(
+        "element", data=[h.element for h in finished.hidden], dtype=text, shape=(len(finished.hidden),)
+    )
+    hidden.create_dataset(
+        "found_in", data=[h.where for h in finished.hidden], dtype=text, shape=(len(finished.hidden),)
+    )
 
 
 def _provenance(entry: h5py.Group, provenance: dict[str, Any]) -> None:

@@ -27,7 +27,7 @@ from xrfid.batch.plan import Plan, make_plan
 from xrfid.batch.refit import Refits, refit
 from xrfid.batch.result import Finished, Strongest, point_status_counts, write_result
 from xrfid.batch.stack import Place, Stack
-from xrfid.batch.store import DRIFT_FIELDS, Part, Sums, create_part
+from xrfid.batch.store import DRIFT_FIELDS, Part, create_part
 from xrfid.batch.work import Progress, Threads, Workers, fit_blocks
 from xrfid.errors import InputError, OutputError
 from xrfid.identify.pipeline import Work, search
@@ -165,8 +165,10 @@ def _workers(stack: Stack, n: int | None, scheduler: str | None) -> Iterator[Wor
 class _Job:
     """One batch: what it works on, and the steps in order."""
 
-    def __init__(self, stack: Stack, out: Path, instrument: Instrument, settings: Settings, elements: tuple[str, ...],
-                 progress: Progress) -> None:  # fmt: skip
+    def __init__(
+        self, stack: Stack, out: Path, instrument: Instrument, settings: Settings, elements: tuple[str, ...],
+        progress: Progress,
+    ) -> None:  # fmt: skip
         self.stack, self.out, self.progress = stack, out, progress
         self.instrument = instrument
         self.settings = restricted(settings, elements)
@@ -189,7 +191,9 @@ class _Job:
         if not self.out.parent.is_dir():
             raise OutputError(str(self.out), "its folder does not exist", "make the folder first")
 
-    def run(self, team: Workers, document: Callable[[Identification], str], compress: bool, overwrite: bool) -> Summary:
+    def run(
+        self, team: Workers, document: Callable[[Identification], str], compress: bool, overwrite: bool
+    ) -> Summary:
         """Do everything that is not done yet."""
         part = self._begun(overwrite) or self._begin()
         resumed_at = part.sums.count
@@ -212,7 +216,9 @@ class _Job:
         try:
             part = Part(self.part_path)
         except (KeyError, ValueError) as error:
-            raise OutputError(str(self.part_path), f"is no unfinished result ({error})", "remove it") from None
+            raise OutputError(
+                str(self.part_path), f"is no unfinished result ({error})", "remove it"
+            ) from None
         wanted = _plain(self.header)
         other = [key for key in wanted if part.header.get(key) != wanted[key]]
         if not other:
@@ -229,25 +235,29 @@ class _Job:
         summed, n = sample_sum(self.stack, blocks, self.progress)
         work = self._search(summed)
         stage = _SAMPLED if self.looks_further else _FINAL
-        return self._lay_out(make_plan(work, n), stage, None, summed, ())
+        return self._lay_out(make_plan(work, n), stage, ())
 
-    def _lay_out(self, plan: Plan, stage: str, sums: Sums | None, prepared: Any, hidden: tuple[Hidden, ...]) -> Part:
+    def _lay_out(self, plan: Plan, stage: str, hidden: tuple[Hidden, ...]) -> Part:
         header = _plain({**self.header, "stage": stage, "hidden": [_hidden_record(h) for h in hidden]})
-        return create_part(self.part_path, header, plan, self.stack.shape, self.stack.n_blocks, sums, prepared)
+        return create_part(self.part_path, header, plan, self.stack.shape, self.stack.n_blocks)
 
     def _search(self, summed: NDArray[np.float64]) -> Work:
         """Search a sum of points; that of a small run is the same before and after, and searched once."""
         if self._searched is None or not np.array_equal(self._searched.spectrum.counts, summed):
             self.progress("identifying", 0, 1)
-            self._searched = search(sum_spectrum(self.stack, summed, "sum of points"), self.instrument, self.settings)
+            self._searched = search(
+                sum_spectrum(self.stack, summed, "sum of points"), self.instrument, self.settings
+            )
         return self._searched
 
     def _second_look(self, part: Part, work: Work) -> Part:
-        """Search the whole sum and the points that stand out; begin again if they show more than the sample did."""
+        """Search the whole sum and the points that stand out; begin again if they show more."""
         judged = self._judgement(part)
         known = {k for k in work.ingredients.columns.keys if str(k) in part.plan.names}
-        hidden = hidden_elements(self.stack, judged, part.sums.holder, work, frozenset(known | set(work.fit.keys)),
-                                 self.instrument, self.settings, self.progress)  # fmt: skip
+        fitted = frozenset(known | set(work.fit.keys))
+        hidden = hidden_elements(
+            self.stack, judged, part.sums.holder, work, fitted, self.instrument, self.settings, self.progress
+        )
         extra = tuple(k for h in hidden for k in h.series)
         if set(work.fit.keys) <= known and not extra:
             part.header["stage"] = _FINAL
@@ -255,16 +265,15 @@ class _Job:
         kept = tuple(k for k in known if k not in work.fit.areas)
         good = int((judged.status == 0).sum())
         plan = make_plan(work, good, (*sorted(kept, key=str), *extra))
-        sums, summed = part.sums, part.sums.summed
         part.close()
-        return self._lay_out(plan, _FINAL, sums, summed, tuple(hidden))
+        return self._lay_out(plan, _FINAL, tuple(hidden))
 
     def _judgement(self, part: Part) -> Judgement:
         with h5py.File(self.part_path, "r", locking=False) as file:
             fit = file["entry/fit"]
             names = ("reduced_chi2", "largest_residual", "largest_residual_energy", "status")
-            values = [fit[name][()].reshape(-1) for name in names]
-        return Judgement(*values, n_bands=part.plan.bands[1] - part.plan.bands[0])
+            chi2, excess, energy, status = (fit[name][()].reshape(-1) for name in names)
+        return Judgement(chi2, excess, energy, status, part.plan.bands[1] - part.plan.bands[0])
 
     def _finish(self, part: Part, work: Work, document: Callable[[Identification], str], compress: bool,
                 overwrite: bool, resumed_at: int) -> Summary:  # fmt: skip
@@ -278,8 +287,8 @@ class _Job:
         bad = point_status_counts(judged.status)
         self.progress("writing", 0, 1)
         finished = Finished(
-            self.stack.shape, part.plan.names, part.sums, work.setting.scale, document(identification), refits, hidden,
-            {**self.header, "points_without_result": bad, "input_path": self.stack.place.path,
+            self.stack.shape, part.plan.names, part.sums, work.setting.scale, document(identification),
+            refits, hidden, {**self.header, "points_without_result": bad, "input_path": self.stack.place.path,
              "truncated": int(self.stack.truncated)},
         )  # fmt: skip
         strongest = write_result(self.part_path, self.out, finished, compress=compress, overwrite=overwrite)
@@ -292,7 +301,7 @@ class _Job:
         self.progress("fitting single points", 0, max(points.size, 1))
         by_name = {str(k): k for k in work.ingredients.columns.keys}
         keys: tuple[SeriesKey, ...] = tuple(by_name[name] for name in part.plan.names if name in by_name)
-        if len(keys) < len(part.plan.names):  # a series outside the range of this search: leave its points alone
+        if len(keys) < len(part.plan.names):  # a series beyond this search's range
             points = points[:0]
         return refit(work, keys, points, self.stack.spectra(points), judged.chi2[points], bad.size)
 
@@ -306,8 +315,8 @@ def _plain(header: dict[str, Any]) -> dict[str, Any]:
 
 
 def _hidden_record(hidden: Hidden) -> dict[str, Any]:
-    return {"element": hidden.element, "series": [[k.z, k.series] for k in hidden.series], "where": hidden.where,
-            "points": list(hidden.points)}  # fmt: skip
+    series = [[k.z, k.series] for k in hidden.series]
+    return {"element": hidden.element, "series": series, "where": hidden.where, "points": list(hidden.points)}
 
 
 def _hidden_from(record: dict[str, Any]) -> Hidden:
@@ -317,6 +326,9 @@ def _hidden_from(record: dict[str, Any]) -> Hidden:
 
 def _largest_drift_ev(drift: Any) -> float:
     """Largest shift at 6 keV over blocks in which it is known to better than 5 eV."""
-    offset, sigma = drift[:, DRIFT_FIELDS.index("offset_kev")], drift[:, DRIFT_FIELDS.index("offset_sigma_kev")]
+    offset, sigma = (
+        drift[:, DRIFT_FIELDS.index("offset_kev")],
+        drift[:, DRIFT_FIELDS.index("offset_sigma_kev")],
+    )
     known = offset[sigma < 0.005]
     return float(1e3 * known[np.argmax(np.abs(known))]) if known.size else 0.0

@@ -70,7 +70,9 @@ class Stack:
         datasets = [self._file[name] for name in self.names]
         shapes = {d.shape for d in datasets}
         if len(shapes) > 1:
-            raise InputError(str(path), f"the datasets to sum differ in shape: {sorted(shapes)}", "choose equal ones")
+            raise InputError(
+                str(path), f"the datasets to sum differ in shape: {sorted(shapes)}", "choose equal ones"
+            )
         self._layers = [layer for d in datasets for layer in self._split(d)]
         first = self._layers[0]
         self.shape, self.n_channels = first.shape[:-1], first.shape[-1]
@@ -87,11 +89,15 @@ class Stack:
             return [Layer(dataset, self._handle)]
         source = f"{self.place.path}:{dataset.name}"
         if dataset.ndim < 3:
-            raise InputError(source, f"has no axis of detectors (shape {dataset.shape})", "leave the detectors out")
+            raise InputError(
+                source, f"has no axis of detectors (shape {dataset.shape})", "leave the detectors out"
+            )
         chosen = tuple(range(dataset.shape[0])) if isinstance(wanted, str) else wanted
         beyond = [i for i in chosen if not 0 <= i < dataset.shape[0]]
         if beyond:
-            raise InputError(source, f"has no detector {beyond[0]}", f"choose from 0 to {dataset.shape[0] - 1}")
+            raise InputError(
+                source, f"has no detector {beyond[0]}", f"choose from 0 to {dataset.shape[0] - 1}"
+            )
         return [Layer(dataset, self._handle, i) for i in chosen]
 
     def __enter__(self) -> Stack:
@@ -133,7 +139,7 @@ class Stack:
         yield from runs(self.box(block), self.shape)
 
     def flat(self, block: int) -> NDArray[np.int64]:
-        """Indices among all points of a block's points, shape (n,)."""
+        """Return the indices among all points of a block's points, shape (n,)."""
         grid = np.ix_(*[np.arange(s.start, s.stop) for s in self.box(block)])
         return np.asarray(np.ravel_multi_index(grid, self.shape)).reshape(-1)
 
@@ -164,11 +170,18 @@ class Stack:
         """Return what tells this run from another: names, shapes, size, age and a sample of its bytes."""
         status = os.fstat(self._handle)
         digest = hashlib.sha256()
+        last = max(status.st_size - _SAMPLE_BYTES, 0)
         for k in range(_SAMPLES):
-            digest.update(os.pread(self._handle, _SAMPLE_BYTES, k * max(status.st_size - _SAMPLE_BYTES, 0) // (_SAMPLES - 1)))
-        return {"datasets": list(self.names), "shape": [*self.shape, self.n_channels], "dtype": str(self.dtype),
-                "detectors": list(self.place.detectors), "bytes": status.st_size, "changed_ns": status.st_mtime_ns,
-                "sample_sha256": digest.hexdigest()}  # fmt: skip
+            digest.update(os.pread(self._handle, _SAMPLE_BYTES, k * last // (_SAMPLES - 1)))
+        return {
+            "datasets": list(self.names),
+            "shape": [*self.shape, self.n_channels],
+            "dtype": str(self.dtype),
+            "detectors": list(self.place.detectors),
+            "bytes": status.st_size,
+            "changed_ns": status.st_mtime_ns,
+            "sample_sha256": digest.hexdigest(),
+        }
 
 
 def runs(box: Box, shape: tuple[int, ...]) -> Iterator[tuple[int, int, int]]:
@@ -181,7 +194,9 @@ def runs(box: Box, shape: tuple[int, ...]) -> Iterator[tuple[int, int, int]]:
         yield piece * length, int(np.ravel_multi_index(corner, shape)), length
 
 
-def _extent(shape: tuple[int, ...], chunks: tuple[int, ...] | None, n_channels: int, itemsize: int) -> tuple[int, ...]:
+def _extent(
+    shape: tuple[int, ...], chunks: tuple[int, ...] | None, n_channels: int, itemsize: int
+) -> tuple[int, ...]:
     """Points per block along each axis: whole chunks, about `BLOCK_BYTES`, last axes filled first."""
     step = [min(c, n) for c, n in zip(chunks or (1,) * (len(shape) + 1), shape, strict=False)]
     most = max(_MOST_BYTES // (n_channels * max(itemsize, 4)), 1)

@@ -43,7 +43,9 @@ class Sums:
     @classmethod
     def nothing(cls, n_channels: int) -> Sums:
         """Start from no block."""
-        return cls(0, np.zeros(n_channels), np.full(n_channels, -1.0, np.float32), np.full(n_channels, -1, np.int64))
+        return cls(
+            0, np.zeros(n_channels), np.full(n_channels, -1.0, np.float32), np.full(n_channels, -1, np.int64)
+        )
 
     def add(self, result: BlockResult, points: NDArray[np.int64]) -> None:
         """Add the next block, whose points have the indices `points`."""
@@ -55,7 +57,12 @@ class Sums:
 
     def packed(self) -> bytes:
         """Return a slot's bytes: checksum, count, arrays."""
-        body = self.count.to_bytes(8, "little") + self.summed.tobytes() + self.highest.tobytes() + self.holder.tobytes()
+        body = (
+            self.count.to_bytes(8, "little")
+            + self.summed.tobytes()
+            + self.highest.tobytes()
+            + self.holder.tobytes()
+        )
         return zlib.crc32(body).to_bytes(8, "little") + body
 
     @classmethod
@@ -93,11 +100,12 @@ class Part:
             fcntl.flock(self._handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
         except OSError:
             os.close(self._handle)
-            raise OutputError(str(path), "another run is writing it", "wait for it, or choose another name") from None
+            raise OutputError(
+                str(path), "another run is writing it", "wait for it, or choose another name"
+            ) from None
         with h5py.File(path, "r", locking=False) as file:
             self.header: dict[str, Any] = json.loads(file.attrs["header"])
             self.plan = _read_plan(file)
-            self.prepared = file["prepared/summed"][()] if "prepared/summed" in file else np.zeros(0)
             self._offsets = {name: file[name].id.get_offset() for name in _arrays(file)}
             self._flags = self._offsets["entry/fit/done"]
             self._slots = self._offsets["state"]
@@ -110,12 +118,24 @@ class Part:
 
     def close(self) -> None:
         """Let go of the file."""
-        os.close(self._handle)
+        if self._handle >= 0:
+            os.close(self._handle)
+            self._handle = -1
 
-    def write(self, result: BlockResult, block: int, pieces: Iterable[tuple[int, int, int]], points: NDArray[np.int64]) -> None:
+    def write(
+        self,
+        result: BlockResult,
+        block: int,
+        pieces: Iterable[tuple[int, int, int]],
+        points: NDArray[np.int64],
+    ) -> None:
         """Write the next block's numbers and count it in; it is vouched for at the next `checkpoint`."""
-        per_point = {"entry/fit/reduced_chi2": result.chi2, "entry/fit/largest_residual": result.residual,
-                     "entry/fit/largest_residual_energy": result.residual_kev, "entry/fit/status": result.status}  # fmt: skip
+        per_point: dict[str, NDArray[Any]] = {
+            "entry/fit/reduced_chi2": result.chi2,
+            "entry/fit/largest_residual": result.residual,
+            "entry/fit/largest_residual_energy": result.residual_kev,
+            "entry/fit/status": result.status,
+        }
         for name, area, sigma in zip(self.plan.names, result.area, result.sigma, strict=True):
             group = f"entry/series/{name.replace(' ', '_')}"
             per_point[f"{group}/area"], per_point[f"{group}/sigma"] = area, sigma
@@ -142,7 +162,7 @@ class Part:
             raise _cannot_write(self.path, error) from None
 
     def _put(self, values: NDArray[Any], offset: int) -> None:
-        view = memoryview(np.ascontiguousarray(values)).cast("B")
+        view = memoryview(np.ascontiguousarray(values).view(np.uint8).reshape(-1).data)
         try:
             while view:
                 done = os.pwrite(self._handle, view, offset)
@@ -151,25 +171,15 @@ class Part:
             raise _cannot_write(self.path, error) from None
 
 
-def create_part(path: Path, header: dict[str, Any], plan: Plan, shape: tuple[int, ...], n_blocks: int, sums: Sums | None,
-                prepared: NDArray[np.float64]) -> Part:  # fmt: skip
-    """Lay out an unfinished result; it appears whole, replacing one that is there.
-
-    Parameters
-    ----------
-    sums : Sums, optional
-        Sum and maximum that an earlier pass found, to be kept beside.
-    prepared : ndarray, shape (n_channels,)
-        The summed spectrum that the plan was made from.
-    """
+def create_part(
+    path: Path, header: dict[str, Any], plan: Plan, shape: tuple[int, ...], n_blocks: int
+) -> Part:
+    """Lay out an unfinished result; it appears whole, replacing one that is there."""
     new = path.with_name(path.name + ".new")
     try:
         with h5py.File(new, "w", locking=False) as file:
             file.attrs["header"] = json.dumps(header)
             _write_plan(file, plan)
-            file["prepared/summed"] = prepared
-            if sums is not None:
-                file["prepared/sums"] = np.frombuffer(sums.packed(), np.uint8)
             for name in plan.names:
                 for kind in ("area", "sigma"):
                     _room(file, f"entry/series/{name.replace(' ', '_')}/{kind}", shape, np.float32)
@@ -188,14 +198,6 @@ def create_part(path: Path, header: dict[str, Any], plan: Plan, shape: tuple[int
     return Part(path)
 
 
-def earlier_sums(path: Path, n_channels: int) -> Sums | None:
-    """Return the sum and maximum that an earlier pass left in an unfinished result."""
-    with h5py.File(path, "r", locking=False) as file:
-        if "prepared/sums" not in file:
-            return None
-        return Sums.unpacked(file["prepared/sums"][()].tobytes(), n_channels)
-
-
 def read_plan(path: Path) -> Plan:
     """Read the plan of an unfinished result, say on another machine."""
     with h5py.File(path, "r", locking=False) as file:
@@ -210,7 +212,9 @@ def _room(file: h5py.File, name: str, shape: tuple[int, ...], dtype: Any) -> Non
     layout.set_fill_time(h5py.h5d.FILL_TIME_NEVER)
     group, _, last = name.rpartition("/")
     where = file.require_group(group) if group else file
-    h5py.h5d.create(where.id, last.encode(), h5py.h5t.py_create(np.dtype(dtype)), h5py.h5s.create_simple(shape), layout)
+    h5py.h5d.create(
+        where.id, last.encode(), h5py.h5t.py_create(np.dtype(dtype)), h5py.h5s.create_simple(shape), layout
+    )
 
 
 def _arrays(file: h5py.File) -> list[str]:
@@ -234,5 +238,7 @@ def _read_plan(file: h5py.File) -> Plan:
 
 def _cannot_write(path: Path, error: OSError) -> OutputError:
     if error.errno in (errno.ENOSPC, errno.EDQUOT):
-        return OutputError(str(path), "the disk is full", "make room and give the same command again: it goes on from here")
+        return OutputError(
+            str(path), "the disk is full", "make room and give the same command again: it goes on from here"
+        )
     return OutputError(str(path), f"cannot be written ({error.strerror or error})", "choose another place")

@@ -35,7 +35,7 @@ class Workers(Protocol):
 
 
 class Threads:
-    """Threads of this process; reading, unpacking and matrix products all let go of the interpreter's lock."""
+    """Threads of this process; reading, unpacking and matrix products let go of the interpreter's lock."""
 
     def __init__(self, stack: Stack, n: int | None = None) -> None:
         self.n = n or len(os.sched_getaffinity(0))
