@@ -209,7 +209,7 @@ def _n42(counts: NDArray[np.int64], sample: dict[str, Any], scale: EnergyScale) 
     rows = counts.reshape(-1, 16)
     data = "\n".join(" ".join(map(str, row)) for row in rows)
     return f"""<?xml version="1.0" encoding="UTF-8"?>
-<RadInstrumentData xmlns="http://physics.nist.gov/N42/2011/N42" 
+<RadInstrumentData xmlns="http://physics.nist.gov/N42/2011/N42"
     n42DocUUID="6c1d3a52-0000-4000-8000-0000000000a4">
   <RadInstrumentInformation id="instrument">
     <RadInstrumentManufacturerName>Ostrenmoor workshop</RadInstrumentManufacturerName>
