@@ -16,36 +16,47 @@ from xrfid.errors import Untrustworthy
 from xrfid.instrument import Instrument
 from xrfid.prepare.patterns import Patterns, patterns_of
 from xrfid.prepare.peaks import Peak, Widths, find_peaks
+from xrfid.prepare.polish import Polished, polish
 from xrfid.prepare.reduced import Reduced, reduce
 from xrfid.prepare.sieve import Grid, Sieve, grid_of
-from xrfid.prepare.trial import Bench, Trial
-from xrfid.spectrum import FANO_FACTOR, MN_KA_KEV, PAIR_ENERGY_EV, EnergyScale, Resolution
+from xrfid.prepare.trial import Bench, Trial, cost
+from xrfid.response.detector import LineShape, escape_lines
+from xrfid.spectrum import FANO_FACTOR, MN_KA_KEV, PAIR_ENERGY_EV, EnergyScale
 
 FWHM_MN_KEV = {"Si": (0.105, 0.36), "Ge": (0.095, 0.36), "CdTe": (0.13, 0.9)}
 """Width at Mn K-alpha that a working detector can have (common practice, no source)."""
 LEAST_LEAD = 30.0
 """Deviance by which the best scale must beat every different one."""
-LEAST_LEAD_SHARE = 0.06
+LEAST_LEAD_SHARE = 0.05
 """The same as a share of what the best scale explains, for spectra with so many counts that every model misfits."""
-LEAST_EXPLAINED = 0.6
+LEAST_EXPLAINED = 0.85
 _ALIGNED = 700
-_SIEVED, _MOVED, _POLISHED = 40, 12, 4
+_SIEVED, _MOVED, _POLISHED = 28, 9, 3
+
+
+@dataclass(frozen=True, eq=False)
+class Candidate:
+    """A scale with the candidates that explain the spectrum on it, polished, and its score (smaller is better)."""
+
+    trial: Trial
+    polished: Polished
+    score: float
+
+    @property
+    def scale(self) -> EnergyScale:
+        """The polished scale."""
+        return self.polished.scale
 
 
 @dataclass(frozen=True, eq=False)
 class Found:
-    """A scale found, the best different one, and how far it is behind."""
+    """A scale found, the best different one, and how far in deviance that is behind."""
 
-    scale: EnergyScale
-    resolution: Resolution
-    offset_sigma_kev: float
-    gain_sigma_kev: float
-    runner_up: EnergyScale | None
+    best: Candidate
+    rival: Candidate | None
     lead: float
-    explained: float
-    elements: tuple[str, ...]
+    names: tuple[str, ...]
     """What explains the spectrum on this scale, strongest first; a by-product, no identification."""
-    peaks: tuple[Peak, ...]
 
 
 class Search:
@@ -54,8 +65,10 @@ class Search:
     def __init__(self, counts: NDArray[np.float64], instrument: Instrument, end_kev: float | None) -> None:
         self.peaks, self.widths = find_peaks(counts)
         self.real = [p for p in self.peaks if p.area > 0]
+        self.detector = instrument.detector
         material = instrument.detector.material
         self.fano, self.pair_ev = FANO_FACTOR[material], PAIR_ENERGY_EV[material]
+        self.escape_kev = max(escape_lines(material), key=lambda line: line.share * line.yield_).loss_kev
         self.bounds = FWHM_MN_KEV[material]
         self.reduced: Reduced = reduce(counts, self.widths)
         known = instrument.tube is not None and "anode" in instrument.tube.model_fields_set
@@ -74,7 +87,7 @@ class Search:
         """The scales that the sieve leaves, best first, no two alike."""
         at = np.array(sorted(p.channel for p in self.real[:5]))
         grid = grid_of(self.real, (at, self.widths.fwhm(at)), self.bench.slope, self.bounds, self.end_kev)
-        sieve = Sieve(self.reduced, self.patterns, self.real)
+        sieve = Sieve(self.reduced, self.patterns, self.real, self.escape_kev)
         best = np.argsort(-sieve.scores(grid))[:_ALIGNED]
         grid, scores = sieve.aligned(Grid(grid.offset_kev[best], grid.gain_kev[best]))
         order = np.argsort(-scores)
@@ -105,6 +118,17 @@ class Search:
             if len(polished) == _POLISHED:
                 break
         return sorted(polished, key=lambda t: t.score)
+
+    def polished(self, trial: Trial) -> Candidate:
+        """A trial with its exact scale, width and score."""
+        if not trial.chosen:
+            resolution = trial.resolution(self.fano, self.pair_ev)
+            return Candidate(trial, Polished(trial.scale, resolution, np.inf, np.inf, (), np.inf), np.inf)
+        shape = LineShape.of(self.detector).with_resolution(trial.resolution(self.fano, self.pair_ev))
+        most = self.bounds[1]
+        made = polish(self.reduced, self.patterns, trial.chosen, shape, trial.scale, self.detector.material, most)
+        score = made.chi2 * self.reduced.net.size + cost(self.patterns, list(trial.chosen), made.scale)
+        return Candidate(trial, made, score)
 
 
 def _apart(a: EnergyScale, b: EnergyScale, channels: tuple[float, float]) -> float:
@@ -152,23 +176,22 @@ def search_trials(search: Search, extra: tuple[EnergyScale, ...] = ()) -> list[T
 
 
 def decide(search: Search, trials: list[Trial]) -> Found:
-    """Accept the best trial if it is well ahead."""
-    best = trials[0]
-    rival = next((t for t in trials[1:] if different(t.scale, best.scale)), None)
-    lead = np.inf if rival is None else rival.score - best.score
-    if best.explained < LEAST_EXPLAINED or len(best.chosen) == 0:
+    """Polish the best trials, and accept the best if it is well ahead of every different one."""
+    candidates = sorted((search.polished(t) for t in trials), key=lambda c: c.score)
+    best = candidates[0]
+    rival = next((c for c in candidates[1:] if different(c.scale, best.scale)), None)
+    if best.trial.explained < LEAST_EXPLAINED or not best.trial.chosen:
         raise Untrustworthy("no energy scale: no set of element lines explains the peaks; give the scale or one known element")
+    lead = np.inf if rival is None else rival.score - best.score
     if rival is not None and lead < LEAST_LEAD + LEAST_LEAD_SHARE * abs(best.score):
         raise Untrustworthy(
             f"no energy scale: two explain the peaks equally well: {_words(search, best)}, or {_words(search, rival)}; "
             "give the scale or one known element"
         )
-    covariance = search.bench.step(best)[1]
-    return Found(
-        best.scale, best.resolution(search.fano, search.pair_ev), float(np.sqrt(covariance[0, 0])),
-        float(np.sqrt(covariance[1, 1])), None if rival is None else rival.scale, float(lead), best.explained,
-        tuple(names_of(search, best)), tuple(search.peaks),
-    )  # fmt: skip
+    again = search.polished(search.bench.try_out(best.scale, (best.polished.resolution.noise_ev * 1e-3) ** 2))
+    if again.score < best.score and not different(again.scale, best.scale):
+        best = again
+    return Found(best, rival, float(lead), tuple(names_of(search, best.trial)))
 
 
 def names_of(search: Search, trial: Trial, most: int = 5) -> list[str]:
@@ -177,6 +200,7 @@ def names_of(search: Search, trial: Trial, most: int = 5) -> list[str]:
     return [search.patterns.names[trial.chosen[i]] for i in order]
 
 
-def _words(search: Search, trial: Trial) -> str:
-    s = trial.scale
-    return f"{s.gain_kev * 1e3:.4g} eV a channel from {s.offset_kev:+.3f} keV ({', '.join(names_of(search, trial, 3))})"
+def _words(search: Search, candidate: Candidate) -> str:
+    s = candidate.scale
+    names = ", ".join(names_of(search, candidate.trial, 3))
+    return f"{s.gain_kev * 1e3:.4g} eV a channel from {s.offset_kev:+.3f} keV ({names})"

@@ -17,6 +17,8 @@ SYSTEMATIC = 0.04
 _CLIP_BINS = 5
 _HAT_BINS = 30.0
 _MOST_BINS = 1200
+_STRONG = 0.06
+"""Share of the strongest channel from which channels take part in sum peaks."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -53,7 +55,7 @@ class Reduced:
 
         Two photons in channels a and b add up to channel ``a + b + offset / gain``.
         """
-        at = (self.centres - offset_in_channels) / self.pile_step
+        at = (self.centres - offset_in_channels + 1 - self.pile_step) / self.pile_step
         density = np.interp(at, np.arange(self.pile_up.size), self.pile_up, left=0.0, right=0.0)
         column = density * np.diff(self.edges)
         return np.asarray(column / max(float(column.max()), 1e-12))
@@ -68,10 +70,13 @@ def reduce(counts: NDArray[np.float64], widths: Widths) -> Reduced:
     net = in_bin - clipped
     level = smoothed(in_bin, 3.0)
     variance = np.maximum(level, 1.0) + (SYSTEMATIC * np.maximum(net, 0.0)) ** 2
-    step = max(int(np.min(np.diff(starts))), 1)
-    fine = np.interp(np.arange(0, starts[-1], step), 0.5 * (starts[1:] + starts[:-1]) - 0.5,
-                     np.maximum(net, 0.0) / np.diff(starts))  # fmt: skip
-    return Reduced(starts - 0.5, in_bin, net, variance, _hats(in_bin.size), _self_folded(fine), step)
+    step = max(int(np.min(np.diff(starts)) / 3), 1)
+    whole = starts[-1] // step
+    base = np.interp((np.arange(whole) + 0.5) * step, 0.5 * (starts[1:] + starts[:-1]), clipped / np.diff(starts))
+    fine = counts[: whole * step].reshape(-1, step).mean(axis=1) - base
+    # weak channels may be sum peaks already; folded once more they would promise triple sums
+    fine = np.where(fine > _STRONG * fine.max(initial=0.0), fine, 0.0)
+    return Reduced(starts - 0.5, in_bin, net, variance, hats(in_bin.size, _HAT_BINS), _self_folded(fine), step)
 
 
 def _starts(counts: NDArray[np.float64], widths: Widths) -> NDArray[np.intp]:
@@ -89,8 +94,9 @@ def _starts(counts: NDArray[np.float64], widths: Widths) -> NDArray[np.intp]:
     return np.array(starts, dtype=np.intp)
 
 
-def _hats(n: int) -> NDArray[np.float64]:
-    knots = np.linspace(0, n - 1, max(int(n / _HAT_BINS), 2) + 1)
+def hats(n: int, spacing: float) -> NDArray[np.float64]:
+    """Triangles `spacing` bins apart that add up to 1, shape (n_hats, n)."""
+    knots = np.linspace(0, n - 1, max(int(n / spacing), 2) + 1)
     distance = np.abs(np.arange(n)[None, :] - knots[:, None]) / (knots[1] - knots[0])
     return np.asarray(np.maximum(1.0 - distance, 0.0))
 

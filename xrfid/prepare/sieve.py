@@ -74,7 +74,8 @@ def grid_of(peaks: list[Peak], widths: tuple[NDArray[np.float64], NDArray[np.flo
 class Sieve:
     """Scores many scales at once."""
 
-    def __init__(self, reduced: Reduced, patterns: Patterns, peaks: list[Peak]) -> None:
+    def __init__(self, reduced: Reduced, patterns: Patterns, peaks: list[Peak], escape_kev: float) -> None:
+        self._escape_kev = escape_kev
         kernel = np.exp(-0.5 * (np.arange(-4, 5) * FWHM_PER_SIGMA / BINS_PER_FWHM) ** 2)
         kernel /= kernel.sum()
         power = float(np.sum(kernel**2))
@@ -121,7 +122,25 @@ class Sieve:
             value, energy = self._reached(grid, closeness)
             grid = self._regressed(grid, value * self._weight[:-1], energy)
         value, _ = self._reached(grid, 0.12)
-        return grid, value @ self._weight[:-1]
+        value = np.maximum(value, self._secondary(grid.offset_kev, grid.gain_kev, 0.2))
+        return grid, value @ self._weight[:-1] - _unusual(grid.offset_kev)
+
+    def _secondary(self, offset: NDArray[np.float64], gain: NDArray[np.float64], closeness: float
+                   ) -> NDArray[np.float64]:  # fmt: skip
+        """How well each peak is a sum of two strong ones or an escape of one, shape (n_scales, n_peaks)."""
+        strong = np.argsort(-self._size[:-1])[:3]
+        out = np.zeros((offset.size, self._channel.size))
+        for i in strong:
+            other = np.flatnonzero(self._size[:-1] < 0.05 * self._size[i])
+            for j in strong:
+                at = self._channel[i] + self._channel[j] + offset / gain
+                off = (at[:, None] - self._channel[other]) / (closeness * self._fwhm[other])
+                out[:, other] = np.maximum(out[:, other], np.exp(-0.5 * off**2))
+            at = self._channel[i] - self._escape_kev / gain
+            above = offset + gain * self._channel[i] > self._escape_kev + 0.2
+            off = (at[:, None] - self._channel[other]) / (closeness * self._fwhm[other])
+            out[:, other] = np.maximum(out[:, other], np.where(above[:, None], np.exp(-0.5 * off**2), 0.0))
+        return out
 
     def _regressed(self, grid: Grid, weight: NDArray[np.float64], energy: NDArray[np.float64]) -> Grid:
         """Weighted straight line of energies (n_scales, n_peaks) against the peaks' channels."""
@@ -159,7 +178,8 @@ class Sieve:
         covered = np.zeros((offset.size, none + 1))
         row = np.broadcast_to(scale[:, None], slot.shape)
         np.maximum.at(covered, (row[hit], slot[hit]), reach[hit])
-        return np.asarray(covered @ self._weight)
+        covered[:, :-1] = np.maximum(covered[:, :-1], self._secondary(offset, gain, 0.4))
+        return np.asarray(covered @ self._weight - _unusual(offset))
 
     def _hits(self, offset: NDArray[np.float64], gain: NDArray[np.float64]
               ) -> tuple[NDArray[np.intp], NDArray[np.intp], NDArray[np.intp], NDArray[np.float64]]:  # fmt: skip
@@ -180,6 +200,11 @@ class Sieve:
         """Bin of each (fractional) channel; 0 for what is out of view."""
         whole = (channel + 0.5).astype(np.int32)
         return self._bin[np.where((whole >= 1) & (whole < self._n_channels - 1), whole, 0)]
+
+
+def _unusual(offset_kev: NDArray[np.float64]) -> NDArray[np.float64]:
+    """What a large offset costs, in the sieve's unit."""
+    return np.asarray(2.0 * np.log1p((offset_kev / 0.1) ** 2))
 
 
 def _lines_by_series(patterns: Patterns) -> tuple[NDArray[np.float64], ...]:

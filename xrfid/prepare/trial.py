@@ -22,6 +22,8 @@ ENTER = 25.0
 """Gain in squared misfit asked of a candidate; twice that of a rare element."""
 COST = 14.0
 """What a candidate costs in the score: choosing it among 170 and its area."""
+OFFSET_COST = 8.0
+"""A large offset is unusual: 6 at 0.1 keV, 37 at 1 keV (common practice, no source)."""
 _BEND = 16.0
 """Squared misfit of a bin from which it counts as a logarithm."""
 _DOPPLER_FANO = 0.0132
@@ -87,7 +89,7 @@ class Bench:
         rest = self._without_hats(r.net - model, variance)
         squared = rest * rest / variance
         score = float(np.sum(_BEND * np.log1p(squared / _BEND) + np.log(variance / r.variance)))
-        score += COST * len(chosen) + ENTER * float(self.patterns.rare[chosen].sum())
+        score += cost(self.patterns, chosen, scale)
         plain = self._without_hats(r.net, r.variance) ** 2 / r.variance
         explained = 1.0 - float(np.minimum(squared, plain).sum() / max(plain.sum(), 1e-9))
         return Trial(scale, noise, score, tuple(chosen), areas, explained, picked, float(areas[-1]), variance)
@@ -109,12 +111,14 @@ class Bench:
         scaled -= (scaled @ basis) @ basis.T
         norm = np.einsum("ij,ij->i", scaled, scaled)
         dead = norm <= 0.02 * whole  # outside the channels, or as smooth as the continuum
+        length = np.sqrt(np.where(dead, 1.0, norm))  # unit columns, or the solver drops the small ones
+        scaled = np.where(dead[:, None], 0.0, scaled / length[:, None])
         last = columns.shape[0]
         chosen, rest = [last], y
         areas = np.zeros(1)
         asked = np.append(self._asked, np.inf)
         for _ in range(most):
-            gain = np.maximum(scaled @ rest, 0.0) ** 2 / np.where(dead, np.inf, norm) - (asked - ENTER)
+            gain = np.maximum(scaled @ rest, 0.0) ** 2 - (asked - ENTER)
             gain[chosen] = 0.0
             best = int(np.argmax(gain))
             if gain[best] < ENTER:
@@ -122,6 +126,7 @@ class Bench:
             chosen.append(best)
             areas = nnls(scaled[chosen].T, y)[0]
             rest = y - areas @ scaled[chosen]
+        areas = areas / length[chosen]
         kept = [(c, a) for c, a in zip(chosen[1:], areas[1:], strict=True) if a > 0]
         return [c for c, _ in kept], np.array([a for _, a in kept] + [areas[0]])
 
@@ -183,6 +188,12 @@ class Bench:
         solved = inverse @ (design @ (rest * weight)) / scale
         covariance = inverse[:3, :3] / np.outer(scale[:3], scale[:3])
         return solved[:3], covariance
+
+
+def cost(patterns: Patterns, chosen: list[int], scale: EnergyScale) -> float:
+    """What candidates and an unusual offset add to a score."""
+    offset = OFFSET_COST * math.log1p((scale.offset_kev / 0.1) ** 2)
+    return offset + COST * len(chosen) + ENTER * float(patterns.rare[chosen].sum())
 
 
 def _width(noise: float, slope: float) -> Resolution:
