@@ -44,7 +44,7 @@ class Stroke:
         return {
             "line_color": self.colour,
             "line_width": 1.25 * self.width,
-            "line_dash": [round(1.3 * d) for d in self.dash],
+            "line_dash": " ".join(str(round(1.3 * d)) for d in self.dash),
         }
 
     def svg(self) -> str:
