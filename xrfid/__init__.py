@@ -17,7 +17,6 @@ if TYPE_CHECKING:
 
 _HOME = {
     "read": ("xrfid.formats", "read_spectrum"),
-    "identify": ("xrfid.identify.pipeline", "identify"),
     "Identification": ("xrfid.identify.result", "Identification"),
     "Settings": ("xrfid.identify.settings", "Settings"),
     "Instrument": ("xrfid.instrument", "Instrument"),
@@ -27,10 +26,12 @@ _HOME = {
 
 def __getattr__(name: str) -> Any:
     """Load the public names on first use, so that ``import xrfid`` costs nothing."""
-    if name not in _HOME:
+    if name not in __all__:
         raise AttributeError(f"module 'xrfid' has no attribute {name!r}")
     from importlib import import_module
 
+    if name == "identify":  # the sub-package is callable
+        return import_module("xrfid.identify")
     module, attribute = _HOME[name]
     return getattr(import_module(module), attribute)
 

@@ -189,3 +189,13 @@ def edge_energies() -> NDArray[np.float64]:
     z_all = np.arange(1, 93, dtype=np.int64)
     shells = np.array([getattr(xraylib, f"{s}_SHELL") for s in SUBSHELLS], dtype=np.int64)
     return np.vstack([np.zeros((1, len(SUBSHELLS))), xraylib_np.EdgeEnergy(z_all, shells)])
+
+
+_GREEK = {"a": "α", "b": "β", "g": "γ", "l": "ℓ", "n": "η", "z": "ζ", "e": "η"}
+
+
+def line_name(name: str) -> str:
+    """Return a line's name in the usual Greek: ``Ka1`` becomes ``Kα1``, ``Lb2`` ``Lβ2``."""
+    if len(name) >= 2 and name[0] in "KLM" and name[1] in _GREEK:
+        return name[0] + _GREEK[name[1]] + name[2:]
+    return name

@@ -10,7 +10,13 @@ from typing import TYPE_CHECKING
 import click
 
 from xrfid.cli import complain
-from xrfid.cli.options import dataset_option, instrument_option, load_instrument, overwrite_option, split_symbols
+from xrfid.cli.options import (
+    dataset_option,
+    instrument_option,
+    load_instrument,
+    overwrite_option,
+    split_symbols,
+)
 from xrfid.errors import InputError, OutputError, XrfidError
 
 if TYPE_CHECKING:
@@ -146,10 +152,10 @@ def _write_json(found: Identification, path: Path, overwrite: bool) -> None:
     from xrfid.report.document import to_json
 
     if str(path) == "-":
-        click.echo(to_json(found))
+        click.echo(to_json(found), nl=False)
         return
     with atomic_output(path, overwrite=overwrite) as beside:
-        Path(beside).write_text(to_json(found) + "\n", encoding="utf-8")
+        Path(beside).write_text(to_json(found), encoding="utf-8")
 
 
 def _write_page(found: Identification, path: Path, overwrite: bool) -> None:

@@ -90,6 +90,21 @@ class Ingredients:
 
 
 @dataclass(frozen=True, eq=False)
+class Sizing:
+    """The tolerances' columns, and the areas from which they were sized."""
+
+    areas: Mapping[SeriesKey, float]
+    nuisances: tuple[Nuisance, ...]
+
+    def only(self, keys: Sequence[SeriesKey]) -> Sizing:
+        """Return the same columns without those of series that are not in `keys`."""
+        names = {str(k) for k in keys}
+        gone = {str(k) for k in self.areas} - names
+        kept = tuple(n for n in self.nuisances if len(n.label) < 2 or n.label[1] not in gone)
+        return Sizing({k: self.areas.get(k, 0.0) for k in keys}, kept)
+
+
+@dataclass(frozen=True, eq=False)
 class Fit:
     """A fitted set of series.
 
@@ -104,6 +119,9 @@ class Fit:
         What each coefficient is: ("series", "Fe K"), ("continuum", "3"), ("share", "Fe K", "Kb"), ...
     functionals : ndarray, shape (n_keys, n_coefficients)
         Each series' area as a linear function of the coefficients.
+    variance : ndarray, shape (n,)
+        Expected variance per group of channels.
+    sizing : Sizing
     """
 
     keys: tuple[SeriesKey, ...]
@@ -114,6 +132,7 @@ class Fit:
     labels: tuple[tuple[str, ...], ...]
     functionals: NDArray[np.float64]
     variance: NDArray[np.float64]
+    sizing: Sizing
 
     @property
     def model(self) -> NDArray[np.float64]:
@@ -136,7 +155,7 @@ class Fit:
 
 
 def fit_series(ingredients: Ingredients, keys: Sequence[SeriesKey], near: Fit | None = None, *, rounds: int = 2,
-               iterations: int = 4) -> Fit:  # fmt: skip
+               iterations: int = 4, resize: bool = True) -> Fit:  # fmt: skip
     """Fit a set of series with all tolerances.
 
     Parameters
@@ -149,40 +168,50 @@ def fit_series(ingredients: Ingredients, keys: Sequence[SeriesKey], near: Fit | 
         How often the tolerances' columns are sized anew from the areas found.
     iterations : int
         Re-weightings per round.
+    resize : bool
+        False: the first round takes the columns of `near` as they are, which saves drawing them when
+        only a series or two have come or gone.
     """
     keys = tuple(keys)
-    areas: dict[SeriesKey, float] = {} if near is None else {k: near.areas.get(k, 0.0) for k in keys}
-    scatter, pair_time = [0.0] * len(ingredients.scatter), 0.0
-    if near is not None:
-        pair_time = near.coefficient("sum")
-        scatter = [near.coefficient("scatter", str(i)) for i in range(len(scatter))]
-    model = None if near is None else near.model
-    done: Fit | None = None
-    for _ in range(rounds):
-        problem, labels, functionals = _assemble(ingredients, keys, areas, scatter, pair_time, model)
-        lines = ingredients.counts if model is None else model
-        inflation = 1.0 + MODEL_PRECISION**2 * lines
-        solution = solve(problem, ingredients.counts, model, inflation=inflation, iterations=iterations)
-        found = functionals @ solution.coefficients
-        spread = np.sqrt(np.maximum(np.einsum("ij,jk,ik->i", functionals, solution.covariance, functionals), 0.0))
-        areas = dict(zip(keys, map(float, found), strict=True))
-        done = Fit(keys, areas, dict(zip(keys, map(float, spread), strict=True)), solution, problem, labels,
-                   functionals, solution.model * inflation)  # fmt: skip
-        scatter = [done.coefficient("scatter", str(i)) for i in range(len(scatter))]
-        pair_time = done.coefficient("sum")
-        model = solution.model
-    assert done is not None
-    return done
+    fit = near
+    for i in range(rounds):
+        if fit is not None and (i > 0 or resize):
+            sizing = _sized(ingredients, keys, fit)
+        else:
+            sizing = Sizing({}, ()) if fit is None else fit.sizing.only(keys)
+        fit = _fit_once(ingredients, keys, sizing, None if fit is None else fit.model, iterations)
+    assert fit is not None
+    return fit
+
+
+def _fit_once(ingredients: Ingredients, keys: tuple[SeriesKey, ...], sizing: Sizing,
+              model: NDArray[np.float64] | None, iterations: int) -> Fit:  # fmt: skip
+    """Assemble and solve one linear problem."""
+    problem, labels = _assemble(ingredients, keys, sizing)
+    functionals = _functionals(ingredients, keys, sizing.areas, labels)
+    inflation = 1.0 + MODEL_PRECISION**2 * (ingredients.counts if model is None else model)
+    solution = solve(problem, ingredients.counts, model, inflation=inflation, iterations=iterations)
+    found = functionals @ solution.coefficients
+    spread = np.sqrt(np.maximum(np.einsum("ij,jk,ik->i", functionals, solution.covariance, functionals), 0.0))
+    return Fit(
+        keys=keys,
+        areas=dict(zip(keys, map(float, found), strict=True)),
+        sigmas=dict(zip(keys, map(float, spread), strict=True)),
+        solution=solution,
+        problem=problem,
+        labels=labels,
+        functionals=functionals,
+        variance=solution.model * inflation,
+        sizing=sizing,
+    )
 
 
 def _assemble(
-    ingredients: Ingredients, keys: tuple[SeriesKey, ...], areas: Mapping[SeriesKey, float], scatter: list[float],
-    pair_time: float, model: NDArray[np.float64] | None,
-) -> tuple[LinearProblem, tuple[tuple[str, ...], ...], NDArray[np.float64]]:  # fmt: skip
-    """Put series, scatter, continuum, pile-up and tolerances into one linear problem."""
+    ingredients: Ingredients, keys: tuple[SeriesKey, ...], sizing: Sizing
+) -> tuple[LinearProblem, tuple[tuple[str, ...], ...]]:
+    """Put series, scatter, continuum, pile-up, free peaks and tolerances into one linear problem."""
     c = ingredients.columns
-    rows = [c.index(k) for k in keys]
-    parts: list[NDArray[np.float64]] = [c.unit[rows]]
+    parts: list[NDArray[np.float64]] = [c.unit[[c.index(k) for k in keys]]]
     labels: list[tuple[str, ...]] = [("series", str(k)) for k in keys]
     parts += [s.column[None] for s in ingredients.scatter]
     labels += [("scatter", str(i)) for i in range(len(ingredients.scatter))]
@@ -199,24 +228,28 @@ def _assemble(
         labels.append(("partial",))
     parts += [p.column[None] for p in ingredients.peaks]
     labels += [p.label for p in ingredients.peaks]
-    n_bounded = len(labels)
-    nuisances = _nuisances(ingredients, areas, scatter, pair_time, model) if areas else []
-    parts += [n.column[None] for n in nuisances]
-    labels += [n.label for n in nuisances]
-    columns = np.concatenate(parts)
+    bounded = len(labels)
+    parts += [n.column[None] for n in sizing.nuisances]
+    labels += [n.label for n in sizing.nuisances]
     mean, precision = np.zeros(len(labels)), np.zeros(len(labels))
     for i, (m, s) in prior.items():
         mean[i], precision[i] = m, s**-2
-    for i, n in enumerate(nuisances, start=n_bounded):
+    for i, n in enumerate(sizing.nuisances, start=bounded):
         mean[i], precision[i] = n.mean, n.sigma**-2
-    bounded = np.arange(len(labels)) < n_bounded
-    problem = LinearProblem(columns, bounded, mean, precision, _smoothness(labels, ingredients.curvature))
-    return problem, tuple(labels), _functionals(ingredients, keys, areas, labels)
+    coupling = _smoothness(labels, ingredients.curvature)
+    columns = np.concatenate(parts)
+    return LinearProblem(columns, np.arange(len(labels)) < bounded, mean, precision, coupling), tuple(labels)
+
+
+def _sized(ingredients: Ingredients, keys: tuple[SeriesKey, ...], near: Fit) -> Sizing:
+    """Draw the tolerances' columns anew for the areas of a fit nearby."""
+    areas = {k: near.areas.get(k, 0.0) for k in keys}
+    scatter = [near.coefficient("scatter", str(i)) for i in range(len(ingredients.scatter))]
+    return Sizing(areas, tuple(_nuisances(ingredients, areas, scatter, near.coefficient("sum"), near.model)))
 
 
 def _nuisances(ingredients: Ingredients, areas: Mapping[SeriesKey, float], scatter: list[float],
-               pair_time: float, model: NDArray[np.float64] | None) -> list[Nuisance]:  # fmt: skip
-    background = ingredients.counts if model is None else model
+               pair_time: float, background: NDArray[np.float64]) -> list[Nuisance]:  # fmt: skip
     widths = np.diff(ingredients.columns.grouping.edges_kev)
     found: list[Nuisance] = []
     for key, area in areas.items():
@@ -229,7 +262,7 @@ def _nuisances(ingredients: Ingredients, areas: Mapping[SeriesKey, float], scatt
 
 
 def _functionals(ingredients: Ingredients, keys: tuple[SeriesKey, ...], areas: Mapping[SeriesKey, float],
-                 labels: list[tuple[str, ...]]) -> NDArray[np.float64]:  # fmt: skip
+                 labels: tuple[tuple[str, ...], ...]) -> NDArray[np.float64]:  # fmt: skip
     """Each series' area: its own coefficient plus what the deviating line groups add."""
     out = np.zeros((len(keys), len(labels)))
     for i, key in enumerate(keys):

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from xrfid.fit.design import SeriesColumns, smooth_functions, scatter_columns, scattered_continuum
+from xrfid.fit.design import SeriesColumns, scatter_columns, scattered_continuum, smooth_functions
 from xrfid.fit.grouping import Grouping
 from xrfid.fit.model import Ingredients
 from xrfid.fit.nuisance import Tolerances

@@ -15,7 +15,7 @@ from xrfid.fit.design import scattered_continuum
 from xrfid.fit.model import Fit, Ingredients
 from xrfid.response.series import SeriesKey
 
-_FAR_MORE = 8.0
+_FAR_MORE = 20.0
 """Target lines this many times larger than expected are not scattered ones alone (models agree to a factor 3)."""
 _WINDOW_KEV = 2.5
 

@@ -9,6 +9,7 @@ import numpy as np
 from xrfid.fit.model import Fit, FreePeak, Ingredients, fit_series
 from xrfid.identify.evidence import free_peak_instead
 from xrfid.identify.select import contradicted, score, significances
+from xrfid.identify.settings import Settings
 from xrfid.response.series import SeriesKey
 
 _SAFE = 45.0
@@ -46,7 +47,7 @@ def unmask_peaks(ingredients: Ingredients, fit: Fit, keep: Sequence[SeriesKey]) 
             continue
         near = [p for p in ingredients.peaks if _beside(ingredients, keys, p)]
         bare = ingredients.with_peaks(tuple(p for p in ingredients.peaks if p not in near))
-        without = fit_series(bare, [k for k in fit.keys if k.z != z], fit, rounds=1, iterations=3)
+        without = fit_series(bare, [k for k in fit.keys if k.z != z], fit, rounds=1, iterations=3, resize=False)
         peak, gain = free_peak_instead(bare, without, keys)
         if gain < 0.5 * _own_gain(bare, without, keys):
             continue
@@ -54,7 +55,7 @@ def unmask_peaks(ingredients: Ingredients, fit: Fit, keep: Sequence[SeriesKey]) 
         if _on_its_line(bare, keys, peak):
             saved -= COINCIDENCE_COST
         changed = bare.with_peaks((*bare.peaks, peak))
-        trial = fit_series(changed, without.keys, without, rounds=1, iterations=4)
+        trial = fit_series(changed, without.keys, without, rounds=1, iterations=4, resize=False)
         if trial.objective < fit.objective + saved:
             ingredients, fit = changed, trial
     return ingredients, fit
@@ -94,9 +95,12 @@ def exchange(
         keys = [k for k in fit.keys if k.z == z]
         if not keys:
             continue
-        without = fit_series(ingredients, [k for k in fit.keys if k.z != z], fit, rounds=1, iterations=3)
+        without = fit_series(ingredients, [k for k in fit.keys if k.z != z], fit, rounds=1, iterations=3, resize=False)
         own = _own_gain(ingredients, without, keys)
-        pool = [k for k in candidates if k in columns and k.z != z and k not in without.areas]
+        pool = [
+            k for k in candidates
+            if k in columns and k.z != z and k not in without.areas and Settings.handicap(k) == 1.0
+        ]  # fmt: skip
         variance = np.maximum(without.variance, ingredients.counts)
         scored = score(without, columns.unit[[columns.index(k) for k in pool]], ingredients.counts, variance)
         for i in np.argsort(-scored.z)[:3]:
@@ -104,7 +108,7 @@ def exchange(
                 break
             if contradicted(ingredients, without, pool[i], float(scored.amplitude[i])):
                 continue
-            trial = fit_series(ingredients, (*without.keys, pool[i]), without, rounds=2, iterations=3)
+            trial = fit_series(ingredients, (*without.keys, pool[i]), without, rounds=2, iterations=3, resize=False)
             if trial.objective < fit.objective - _SWAP_GAIN:
                 fit = trial
     return fit

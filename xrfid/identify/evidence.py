@@ -37,7 +37,7 @@ def gather(
 ) -> ElementEvidence:
     """Collect the evidence for element `z`: refit without it, look at its lines, try its rivals."""
     keys = tuple(k for k in fit.keys if k.z == z)
-    without = fit_series(ingredients, [k for k in fit.keys if k.z != z], fit, rounds=1, iterations=4)
+    without = fit_series(ingredients, [k for k in fit.keys if k.z != z], fit, rounds=1, iterations=4, resize=False)
     loss = max(without.objective - fit.objective, 0.0)
     misfit = _misfit_at(ingredients, fit, keys)
     lines = tuple(line for key in keys for line in _lines(ingredients, fit, key))
@@ -115,7 +115,7 @@ def _rivals(
             continue
         if contradicted(ingredients, without, pool[i], float(scored.amplitude[i])):
             continue
-        trial = fit_series(ingredients, (*without.keys, pool[i]), without, rounds=1, iterations=3)
+        trial = fit_series(ingredients, (*without.keys, pool[i]), without, rounds=1, iterations=3, resize=False)
         found.append(Rival(str(pool[i]), "element", float(trial.objective - fit.objective)))
     return tuple(sorted(found, key=lambda r: r.deviance_worse))
 

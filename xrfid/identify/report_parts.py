@@ -50,7 +50,9 @@ def assemble(work: Work) -> Identification:
         calibration=_calibration(work),
         findings=everything,
         limits=_limits(work, {f.element for f in everything}),
-        artefacts=(*artefacts(drawn, fit, work.spectrum.live_time_s), *diffraction),
+        artefacts=tuple(
+            sorted((*artefacts(drawn, fit, work.spectrum.live_time_s), *diffraction), key=lambda a: a.energy_kev)
+        ),
         unexplained=unexplained,
         assumptions=assumptions(work),
         cautions=cautions(work, everything),

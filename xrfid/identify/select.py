@@ -12,16 +12,18 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.ndimage import uniform_filter1d
+from scipy.ndimage import gaussian_filter1d, uniform_filter1d
 from scipy.special import ndtr
 
-from xrfid.fit.grouping import Grouping
+from xrfid.fit.grouping import CHANNELS_PER_FWHM, Grouping
 from xrfid.fit.model import Fit, FreePeak, Ingredients, fit_series
 from xrfid.response.series import SeriesKey
-from xrfid.spectrum import Resolution
+from xrfid.spectrum import FWHM_PER_SIGMA, Resolution
 
-_MISFIT_WINDOW = 21
-"""Groups of channels (about four FWHM) over which the local misfit is averaged."""
+_MISFIT_WINDOW = 55
+"""Groups of channels (about eleven FWHM) over which the local misfit is averaged."""
+_PEAK_SIGMA = CHANNELS_PER_FWHM / FWHM_PER_SIGMA
+"""A peak's standard deviation in groups of channels."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -51,9 +53,15 @@ def score(fit: Fit, columns: NDArray[np.float64], counts: NDArray[np.float64], v
 
 
 def local_misfit(fit: Fit, counts: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Mean squared residual near each group of channels, in units of its variance; at least 1."""
-    squared = (counts - fit.model) ** 2 / fit.variance
-    return np.asarray(np.maximum(uniform_filter1d(np.minimum(squared, 400.0), _MISFIT_WINDOW, mode="nearest"), 1.0))
+    """How much larger than chance the misfit near each group of channels is, as a factor on the variance.
+
+    The residual is first weighed with a peak's own width, because misfit comes in waves that look
+    like peaks: what matters is how often the neighbourhood shows "peaks" of either sign. At least 1.
+    """
+    root = np.sqrt(fit.variance)
+    like_a_peak = gaussian_filter1d((counts - fit.model) / root, _PEAK_SIGMA, mode="nearest")
+    squared = like_a_peak**2 * (2.0 * np.sqrt(np.pi) * _PEAK_SIGMA)
+    return np.asarray(np.maximum(uniform_filter1d(np.minimum(squared, 36.0), _MISFIT_WINDOW, mode="nearest"), 1.0))
 
 
 def forward(

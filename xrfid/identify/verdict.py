@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from xrfid.atoms.elements import NOBLE_GASES, UNSTABLE, symbol
+from xrfid.atoms.lines import line_name
 from xrfid.identify.evidence import RIVAL_MARGIN, ElementEvidence
 from xrfid.identify.limits import K_95
 from xrfid.identify.result import Evidence, Rival, Verdict
@@ -21,12 +22,22 @@ def decide(found: ElementEvidence) -> tuple[Verdict, str]:
         return Verdict.TENTATIVE, _weak(name, evidence, asked, rare)
     if close:
         return Verdict.UNRESOLVED, _rivalled(name, evidence, close)
-    if evidence.missing_lines:
+    if evidence.missing_lines and _much_is_missing(evidence):
         return Verdict.TENTATIVE, (
             f"{name} would explain counts worth {evidence.significance:.1f} sigma, but its "
-            f"{_listed(evidence.missing_lines)} should be visible and is not."
+            f"{_listed(tuple(line_name(m.split()[1]) for m in evidence.missing_lines))} should be visible and is not."
         )
     return Verdict.IDENTIFIED, _firm(name, evidence, rare)
+
+
+_TOO_MUCH = 0.35
+
+
+def _much_is_missing(evidence: Evidence) -> bool:
+    """Whether the lines that do not show carry a good part of the element, or nothing else is its own."""
+    predicted = sum(line.predicted for line in evidence.lines)
+    missing = sum(x.predicted for x in evidence.lines if f"{x.series} {x.group}" in evidence.missing_lines)
+    return missing > _TOO_MUCH * predicted or not evidence.strongest_own_line
 
 
 def _weak(name: str, evidence: Evidence, asked: float, rare: bool) -> str:
@@ -47,7 +58,7 @@ def _rivalled(name: str, evidence: Evidence, close: list[Rival]) -> str:
 
 def _firm(name: str, evidence: Evidence, rare: bool) -> str:
     seen = [line for line in evidence.lines if line.observed > 3.0 * line.sigma and line.own > 0.2]
-    lines = _listed(tuple(f"{x.group} ({x.energy_kev:.2f} keV)" for x in sorted(seen, key=lambda x: -x.observed)[:3]))
+    lines = _listed(tuple(f"{line_name(x.group)} ({x.energy_kev:.2f} keV)" for x in sorted(seen, key=lambda x: -x.observed)[:3]))
     where = f"at {lines}" if lines else "under its neighbours' lines"
     text = f"Without {name} the fit loses {evidence.significance:.1f} sigma {where}; nothing else explains these counts."
     return text + (" It hardly ever occurs: check the sample's history." if rare else "")

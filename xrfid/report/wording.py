@@ -6,6 +6,7 @@ import math
 from collections.abc import Sequence
 from itertools import takewhile
 
+from xrfid.atoms.lines import line_name
 from xrfid.identify.result import Finding, Identification, Verdict
 
 GROUP_SPACE = "\N{NARROW NO-BREAK SPACE}"
@@ -19,9 +20,6 @@ VERDICT_MARKS = {
     Verdict.OUT_OF_REACH: "",
 }
 """One character per verdict, for tables of many spectra."""
-
-_GREEK = {"a": "α", "b": "β", "g": "γ", "l": "ℓ", "n": "η", "z": "ζ"}
-
 
 def grouped(value: float, decimals: int = 0, space: str = " ") -> str:
     """Return a number with its digits in groups of three: ``812 340``; a dash if it is not finite."""
@@ -52,13 +50,6 @@ def two_digits(value: float | None, space: str = " ") -> str:
 def significance(value: float) -> str:
     """Return a significance as a plain number: one decimal below 10, none above."""
     return grouped(value, 1 if abs(value) < 9.95 else 0)
-
-
-def line_name(name: str) -> str:
-    """Return a line's name in the usual Greek: ``Ka1`` becomes ``Kα1``, ``Lb2`` ``Lβ2``."""
-    if len(name) >= 2 and name[0] in "KLM" and name[1] in _GREEK:
-        return name[0] + _GREEK[name[1]] + name[2:]
-    return name
 
 
 def subject(identification: Identification) -> str:
