@@ -29,7 +29,7 @@ LEAST_LEAD = 30.0
 """Deviance by which the best scale must beat every different one."""
 LEAST_LEAD_SHARE = 0.05
 """The same as a share of what the best scale explains, for spectra with so many counts that every model misfits."""
-LEAST_EXPLAINED = 0.85
+LEAST_EXPLAINED = 0.8
 _ALIGNED = 700
 _SIEVED, _MOVED, _POLISHED = 28, 9, 3
 

@@ -15,8 +15,10 @@ from numpy.typing import NDArray
 from xrfid.atoms.lines import GROUPS
 from xrfid.prepare.patterns import Patterns
 from xrfid.prepare.reduced import Reduced, hats
+from xrfid.prepare.trial import damped
 from xrfid.prepare.snip import smoothed, snip
 from xrfid.response.detector import DrawnLines, LineShape, draw, joined
+from xrfid.response.series import SeriesKey
 from xrfid.spectrum import FWHM_PER_SIGMA, EnergyScale, Resolution
 
 SYSTEMATIC = 0.012
@@ -24,7 +26,7 @@ SYSTEMATIC = 0.012
 LINE_ENERGY_EV = 1.5
 """What published line energies, and unresolved satellites, are good for (`xrfid.atoms.lines.GROUPS`)."""
 _BEND = 12.0
-_ROUNDS = 5
+_ROUNDS = 8
 _CLIP_BINS = 12
 _HAT_BINS = 10.0
 _CLEAR = 12.0
@@ -75,21 +77,18 @@ def polish(reduced: Reduced, patterns: Patterns, chosen: tuple[int, ...], shape:
     moving : bool
         False to leave offset and gain as they are: widths and residuals only.
     """
-    work = _Work(reduced, patterns, chosen, material)
+    work = _Work(reduced, patterns, _with_companions(patterns, chosen), material)
     resolution = shape.resolution
     covariance = np.zeros((3, 3))
     for _ in range(_ROUNDS):
         solved = work.solve(scale, shape.with_resolution(resolution))
         covariance = solved.covariance
-        limit = 0.4 * float(resolution.fwhm_kev(6.0))
-        reach = float(reduced.edges[-1])
-        do = float(np.clip(solved.step[0], -limit, limit))
-        dg = float(np.clip(solved.step[1], -limit / reach * 2, limit / reach * 2))
+        step = damped(solved.step, solved.channels, 0.4 * float(resolution.fwhm_kev(6.0)))
         if moving:
-            scale = EnergyScale(scale.offset_kev + do, scale.gain_kev + dg)
-        noise = float(np.clip((resolution.noise_ev * 1e-3) ** 2 + solved.step[2], 0.015**2, most_noise_kev**2))
+            scale = EnergyScale(scale.offset_kev + step[0], scale.gain_kev + step[1])
+        noise = float(np.clip((resolution.noise_ev * 1e-3) ** 2 + step[2], 0.015**2, most_noise_kev**2))
         resolution = Resolution(1e3 * math.sqrt(noise), resolution.fano, resolution.pair_energy_ev)
-        if abs(do) < 2e-4 and abs(dg) * reach < 2e-4:
+        if np.max(np.abs(step[0] + step[1] * solved.channels)) < 2e-4:
             break
     solved = work.solve(scale, shape.with_resolution(resolution))
     sigma = _uncertainty(solved, scale, reduced)
@@ -108,9 +107,30 @@ def _uncertainty(solved: _Solved, scale: EnergyScale, reduced: Reduced) -> tuple
     return float(np.sqrt(max(counting[0], both[0]))), float(np.sqrt(max(counting[1], both[1])))
 
 
+def _with_companions(patterns: Patterns, chosen: tuple[int, ...]) -> tuple[int, ...]:
+    """Add the softer series that a chosen one brings along, lest another element's lines stand in for them.
+
+    The M lines of lead under the K lines of sulphur would shift the scale by 40 eV there.
+    """
+    place = {k: i for i, k in enumerate(patterns.keys) if k is not None}
+    out = list(chosen)
+    for i in chosen:
+        key = patterns.keys[i]
+        if key is None:
+            continue
+        softer = {"K": "L", "L": "M", "M": "L"}[key.series]
+        heavy = key.z >= (45 if key.series == "K" else 72)
+        other = place.get(SeriesKey(key.z, softer))
+        if heavy and other is not None and other not in out:
+            out.append(other)
+    return tuple(out)
+
+
 @dataclass(frozen=True, eq=False)
 class _Solved:
     step: NDArray[np.float64]
+    channels: NDArray[np.float64]
+    """Where the candidates have their greatest counts."""
     covariance: NDArray[np.float64]
     residuals: tuple[tuple[str, float, float, float], ...]
     chi2: float
@@ -195,7 +215,8 @@ class _Work:
         amount[loose] += extra
         residuals = self._residuals(groups, np.maximum(amount, 0.0), rest + solution[:3] @ moves, variance, scale)
         chi2 = float(np.mean(np.minimum(rest**2 / variance, _BEND)))
-        return _Solved(solution[:3], inverse[:3, :3], residuals, chi2)
+        channels = r.centres[np.argmax(series, axis=1)]
+        return _Solved(solution[:3], channels, inverse[:3, :3], residuals, chi2)
 
     def _moves(self, model: NDArray[np.float64], scale: EnergyScale) -> NDArray[np.float64]:
         """Derivatives of the model by offset, gain and squared noise, shape (3, n)."""

@@ -20,7 +20,7 @@ from xrfid.spectrum import FWHM_PER_SIGMA, EnergyScale
 
 GAIN_KEV = (0.0015, 0.12)
 OFFSET_KEV = 1.05
-_LINES_PER_SERIES = 5
+_LINES_PER_SERIES = 6
 _MAJOR = 0.05
 _PEAKS = 14
 _STEP_FWHM = 0.5
@@ -62,8 +62,9 @@ def grid_of(peaks: list[Peak], widths: tuple[NDArray[np.float64], NDArray[np.flo
         energy = offset[:, None] + gain * channel
         square = (fwhm * gain) ** 2 - slope_kev * np.maximum(energy, 0.0)
         at_mn = square + slope_kev * 5.895
-        good = at_mn.mean(axis=1)
-        ok = (good > fwhm_mn_kev[0] ** 2) & (good < fwhm_mn_kev[1] ** 2)
+        # the width model may be off at either end; one place with a possible width is enough
+        ok = (at_mn.max(axis=1) > fwhm_mn_kev[0] ** 2) & (at_mn.min(axis=1) < fwhm_mn_kev[1] ** 2)
+        ok &= (at_mn.mean(axis=1) > 0.3 * fwhm_mn_kev[0] ** 2) & (at_mn.mean(axis=1) < 1.5 * fwhm_mn_kev[1] ** 2)
         if end_kev is not None:
             ok &= offset + gain * top < 1.03 * end_kev
         found_o.append(offset[ok])
@@ -83,7 +84,9 @@ class Sieve:
         self._sd = np.sqrt(np.convolve(reduced.variance, kernel**2, mode="same")) / power
         n = int(reduced.edges[-1] + 1)
         self._bin = np.searchsorted(reduced.edges, np.arange(n)) - 1
-        self._upper = np.maximum(self._area, 0.0) + 2.5 * self._sd
+        upper = np.maximum(self._area, 0.0) + 2.5 * self._sd
+        self._exact = upper
+        self._near = np.maximum(upper, np.maximum(np.roll(upper, 1), np.roll(upper, -1)))
         self._n_channels = n
         self._n_bins = reduced.net.size
         self._energy, self._share, self._free, self._rare = _lines_by_series(patterns)
@@ -94,7 +97,8 @@ class Sieve:
         slot = np.full(self._n_bins, len(strong), dtype=np.intp)
         at = [int(self._bin[int(p.channel + 0.5)]) for p in strong]
         for i in reversed(range(len(strong))):
-            slot[max(at[i] - 1, 0) : at[i] + 2] = i
+            near = np.abs(reduced.centres - strong[i].channel) <= max(0.5 * strong[i].fwhm, 1.5)
+            slot[near] = i
         size = np.array([max(float(self._area[a]), 1.0) for a in at] + [1.0])
         self._slot, self._size = slot, size
         self._weight = np.array([math.log1p(p.significance**2) for p in strong] + [0.0])
@@ -118,10 +122,10 @@ class Sieve:
         scores : ndarray, shape (n_scales,)
             Larger is better; a line off its peak by a tenth of the FWHM counts for less.
         """
-        for closeness in (0.3, 0.2, 0.12):
+        for closeness in (0.3, 0.2, 0.15):
             value, energy = self._reached(grid, closeness)
             grid = self._regressed(grid, value * self._weight[:-1], energy)
-        value, _ = self._reached(grid, 0.12)
+        value, _ = self._reached(grid, 0.2)
         value = np.maximum(value, self._secondary(grid.offset_kev, grid.gain_kev, 0.2))
         return grid, value @ self._weight[:-1] - _unusual(grid.offset_kev)
 
@@ -157,7 +161,7 @@ class Sieve:
 
     def _reached(self, grid: Grid, closeness: float) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Per scale and peak: how well its best line explains it, and that line's energy."""
-        scale, series, slot, reach = self._hits(grid.offset_kev, grid.gain_kev)
+        scale, series, slot, reach = self._hits(grid.offset_kev, grid.gain_kev, self._near if closeness > 0.25 else self._exact)
         energy = np.broadcast_to(self._energy[series], slot.shape)
         hit = slot < self._weight.size - 1
         row = np.broadcast_to(scale[:, None], slot.shape)[hit]
@@ -172,7 +176,7 @@ class Sieve:
         return best, line
 
     def _chunk(self, offset: NDArray[np.float64], gain: NDArray[np.float64]) -> NDArray[np.float64]:
-        scale, _, slot, reach = self._hits(offset, gain)
+        scale, _, slot, reach = self._hits(offset, gain, self._near)
         none = self._weight.size - 1
         hit = slot < none
         covered = np.zeros((offset.size, none + 1))
@@ -181,7 +185,7 @@ class Sieve:
         covered[:, :-1] = np.maximum(covered[:, :-1], self._secondary(offset, gain, 0.4))
         return np.asarray(covered @ self._weight - _unusual(offset))
 
-    def _hits(self, offset: NDArray[np.float64], gain: NDArray[np.float64]
+    def _hits(self, offset: NDArray[np.float64], gain: NDArray[np.float64], upper: NDArray[np.float64]
               ) -> tuple[NDArray[np.intp], NDArray[np.intp], NDArray[np.intp], NDArray[np.float64]]:  # fmt: skip
         """Series whose main line lies on a peak: scale and series (n,), peak and reach of each line (n, 5)."""
         none = self._weight.size - 1
@@ -190,7 +194,7 @@ class Sieve:
         energy, share = self._energy[series], self._share[series]
         place = self._place((energy - offset[scale, None]) / gain[scale, None])
         inside = (place > 0) & (share > 0)
-        allowed = self._upper[place] / np.maximum(share * (1.0 - self._free[series]), 1e-9)
+        allowed = upper[place] / np.maximum(share * (1.0 - self._free[series]), 1e-9)
         amount = np.min(np.where(inside, allowed, np.inf), axis=1)
         slot = np.where(inside, self._slot[place], none)
         reach = np.minimum(amount[:, None] * share / self._size[slot], 1.0) * self._rare[series, None]
@@ -207,6 +211,17 @@ def _unusual(offset_kev: NDArray[np.float64]) -> NDArray[np.float64]:
     return np.asarray(2.0 * np.log1p((offset_kev / 0.1) ** 2))
 
 
+def _bunches(energy_kev: NDArray[np.float64], share: NDArray[np.float64]) -> list[tuple[float, float]]:
+    """Share and mean energy of lines that a usual silicon detector shows as one peak."""
+    order = np.argsort(energy_kev)
+    e, s = energy_kev[order], share[order]
+    apart = np.diff(e) > 0.6 * np.sqrt(0.09**2 + 0.00233 * e[1:])
+    number = np.concatenate([[0], np.cumsum(apart)])
+    total = np.bincount(number, s)
+    mean = np.bincount(number, s * e) / np.maximum(total, 1e-12)
+    return list(zip(total.tolist(), mean.tolist(), strict=True))
+
+
 def _lines_by_series(patterns: Patterns) -> tuple[NDArray[np.float64], ...]:
     """Energy, share and latitude of the major line groups, shape (n_series, 5), main group first."""
     rows = [i for i, name in enumerate(patterns.names)]
@@ -217,12 +232,10 @@ def _lines_by_series(patterns: Patterns) -> tuple[NDArray[np.float64], ...]:
         groups = []
         for g in np.unique(patterns.group[on]):
             these = np.flatnonzero(on)[patterns.group[on] == g]
-            total = float(patterns.share[these].sum())
-            mean = float(np.average(patterns.energy_kev[these], weights=patterns.share[these]))
             latitude = 0.8 if GROUPS[int(g)].tolerance > 0 else 0.0
-            groups.append((total, mean, latitude))
+            groups += [(*bunch, latitude) for bunch in _bunches(patterns.energy_kev[these], patterns.share[these])]
         groups.sort(key=lambda x: -x[0])
         for k, (total, mean, latitude) in enumerate(groups[:_LINES_PER_SERIES]):
             if total > _MAJOR:
                 energy[j, k], share[j, k], free[j, k] = mean, total, latitude
-    return energy, share, free, np.where(patterns.rare > 0, 0.75, 1.0)
+    return energy, share, free, np.where(patterns.rare > 0, 0.85, 1.0)

@@ -150,20 +150,23 @@ class Bench:
     def refined(self, trial: Trial, rounds: int = 3, most: int = 14) -> Trial:
         """Move offset, gain and width to where the explained peaks want them (Gauss-Newton)."""
         best = trial
+        limit = 0.5 * float(_width(trial.noise, self.slope).fwhm_kev(6.0))
         for _ in range(rounds):
-            step = self.step(best)[0]
-            limit = 0.5 * float(_width(best.noise, self.slope).fwhm_kev(6.0))
-            reach = float(self.reduced.edges[-1])
-            do, dg = float(np.clip(step[0], -limit, limit)), float(np.clip(step[1] * reach, -2 * limit, 2 * limit)) / reach
+            step = damped(self.step(best)[0], self._channels(best), limit)
             noise = float(np.clip(best.noise + step[2], -0.35 * self.slope * 5.9, 0.35**2))
-            if best.scale.gain_kev + dg <= 0:
+            gain = best.scale.gain_kev + step[1]
+            if gain <= 0:
                 break
-            scale = EnergyScale(best.scale.offset_kev + do, best.scale.gain_kev + dg)
+            scale = EnergyScale(best.scale.offset_kev + step[0], gain)
             new = self.try_out(scale, noise, most)
             if new.score > best.score - 0.5:
                 return new if new.score < best.score else best
             best = new
         return best
+
+    def _channels(self, trial: Trial) -> NDArray[np.float64]:
+        """Where the chosen candidates have their greatest counts."""
+        return np.asarray(self.reduced.centres[np.argmax(trial.columns, axis=1)]) if trial.chosen else np.zeros(1)
 
     def step(self, trial: Trial) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Gauss-Newton step in (offset, gain, squared noise) and its covariance, shapes (3,) and (3, 3)."""
@@ -188,6 +191,12 @@ class Bench:
         solved = inverse @ (design @ (rest * weight)) / scale
         covariance = inverse[:3, :3] / np.outer(scale[:3], scale[:3])
         return solved[:3], covariance
+
+
+def damped(step: NDArray[np.float64], channels: NDArray[np.float64], limit_kev: float) -> NDArray[np.float64]:
+    """Shorten a step in (offset, gain, ...) so that no line at `channels` moves by more than `limit_kev`."""
+    move = float(np.max(np.abs(step[0] + step[1] * channels), initial=0.0))
+    return np.asarray(step * min(1.0, limit_kev / max(move, 1e-12)))
 
 
 def cost(patterns: Patterns, chosen: list[int], scale: EnergyScale) -> float:
