@@ -136,9 +136,7 @@ def _all_numbers(line: str, decimal_comma: bool) -> list[float] | None:
     out = []
     for piece in pieces:
         word = piece.replace(",", ".") if decimal_comma and _COMMA_NUMBER.match(piece) else piece
-        if _IS_NUMBER.match(word):
-            out.append(float(word))
-        elif word.lower() in ("nan", "inf", "-inf", "+inf"):
+        if _IS_NUMBER.match(word) or word.lower() in ("nan", "inf", "-inf", "+inf"):
             out.append(float(word))
         else:
             return None
