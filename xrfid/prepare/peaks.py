@@ -212,6 +212,11 @@ def _few_counts(sums: NDArray[np.float64], i: int, fwhm: float) -> float:
     return math.sqrt(max(2.0 * term, 0.0))
 
 
+def refit(counts: NDArray[np.float64], peak: Peak) -> Peak:
+    """Return a peak with position, area and width from a fit; area 0 if it does not hold."""
+    return _fitted(counts, peak.channel, peak.fwhm, peak.significance)
+
+
 def _fitted(counts: NDArray[np.float64], channel: float, fwhm: float, significance: float) -> Peak:
     """Fit a Gaussian on a straight line around a peak (Gauss-Newton, weights from the counts).
 

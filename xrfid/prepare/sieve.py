@@ -129,6 +129,14 @@ class Sieve:
         value = np.maximum(value, self._secondary(grid.offset_kev, grid.gain_kev, 0.2))
         return grid, value @ self._weight[:-1] - _unusual(grid.offset_kev)
 
+    def one(self, scale: EnergyScale, closeness: float
+            ) -> tuple[float, NDArray[np.float64], NDArray[np.float64]]:  # fmt: skip
+        """Share of the peaks' weight that a single scale explains; per peak how well, and its line's energy."""
+        grid = Grid(np.array([scale.offset_kev]), np.array([scale.gain_kev]))
+        lines, energy = self._reached(grid, closeness)
+        value = np.maximum(lines, self._secondary(grid.offset_kev, grid.gain_kev, closeness))
+        return float((value @ self._weight[:-1])[0] / max(float(self._weight.sum()), 1e-9)), lines[0], energy[0]
+
     def _secondary(self, offset: NDArray[np.float64], gain: NDArray[np.float64], closeness: float
                    ) -> NDArray[np.float64]:  # fmt: skip
         """How well each peak is a sum of two strong ones or an escape of one, shape (n_scales, n_peaks)."""
@@ -211,31 +219,29 @@ def _unusual(offset_kev: NDArray[np.float64]) -> NDArray[np.float64]:
     return np.asarray(2.0 * np.log1p((offset_kev / 0.1) ** 2))
 
 
-def _bunches(energy_kev: NDArray[np.float64], share: NDArray[np.float64]) -> list[tuple[float, float]]:
-    """Share and mean energy of lines that a usual silicon detector shows as one peak."""
-    order = np.argsort(energy_kev)
-    e, s = energy_kev[order], share[order]
+def _lines_by_series(patterns: Patterns) -> tuple[NDArray[np.float64], ...]:
+    """Energy, share and latitude of the major peaks of each series, shape (n_series, 6), the largest first.
+
+    Lines of one group that a usual silicon detector shows as one peak are taken together.
+    """
+    order = np.lexsort((patterns.energy_kev, patterns.group, patterns.of))
+    of, group, e, s = patterns.of[order], patterns.group[order], patterns.energy_kev[order], patterns.share[order]
     apart = np.diff(e) > 0.6 * np.sqrt(0.09**2 + 0.00233 * e[1:])
+    apart |= (np.diff(of) != 0) | (np.diff(group) != 0)
     number = np.concatenate([[0], np.cumsum(apart)])
+    first = np.flatnonzero(np.concatenate([[True], apart]))
     total = np.bincount(number, s)
     mean = np.bincount(number, s * e) / np.maximum(total, 1e-12)
-    return list(zip(total.tolist(), mean.tolist(), strict=True))
-
-
-def _lines_by_series(patterns: Patterns) -> tuple[NDArray[np.float64], ...]:
-    """Energy, share and latitude of the major line groups, shape (n_series, 5), main group first."""
-    rows = [i for i, name in enumerate(patterns.names)]
-    shape = (len(rows), _LINES_PER_SERIES)
+    tolerance = np.array([g.tolerance for g in GROUPS])[group[first]]
+    owner = of[first]
+    rank = np.lexsort((-total, owner))
+    start = np.searchsorted(owner[rank], np.arange(len(patterns.names)))
+    place = np.arange(rank.size) - start[owner[rank]]
+    keep = (place < _LINES_PER_SERIES) & (total[rank] > _MAJOR)
+    shape = (len(patterns.names), _LINES_PER_SERIES)
     energy, share, free = np.zeros(shape), np.zeros(shape), np.zeros(shape)
-    for j, i in enumerate(rows):
-        on = patterns.of == i
-        groups = []
-        for g in np.unique(patterns.group[on]):
-            these = np.flatnonzero(on)[patterns.group[on] == g]
-            latitude = 0.8 if GROUPS[int(g)].tolerance > 0 else 0.0
-            groups += [(*bunch, latitude) for bunch in _bunches(patterns.energy_kev[these], patterns.share[these])]
-        groups.sort(key=lambda x: -x[0])
-        for k, (total, mean, latitude) in enumerate(groups[:_LINES_PER_SERIES]):
-            if total > _MAJOR:
-                energy[j, k], share[j, k], free[j, k] = mean, total, latitude
+    rows, columns, used = owner[rank][keep], place[keep], rank[keep]
+    energy[rows, columns] = mean[used]
+    share[rows, columns] = total[used]
+    free[rows, columns] = np.where(tolerance[used] > 0, 0.8, 0.0)
     return energy, share, free, np.where(patterns.rare > 0, 0.85, 1.0)

@@ -17,7 +17,7 @@ HALF_WIDTH_IN_FWHM = 1.3
 
 def lls(counts: ArrayLike) -> NDArray[np.float64]:
     """Log-log-square-root transform ``ln(ln(sqrt(y + 1) + 1) + 1)``, for counts >= 0."""
-    return np.log(np.log(np.sqrt(np.asarray(counts, dtype=float) + 1.0) + 1.0) + 1.0)
+    return np.asarray(np.log(np.log(np.sqrt(np.asarray(counts, dtype=float) + 1.0) + 1.0) + 1.0))
 
 
 def inverse_lls(transformed: ArrayLike) -> NDArray[np.float64]:
