@@ -81,7 +81,7 @@ class Resolution:
         """Full width at half maximum, keV, at energies in keV, any shape."""
         e_ev = np.maximum(np.asarray(energy_kev, dtype=float), 0.0) * 1e3
         variance = self.noise_ev**2 + FWHM_PER_SIGMA**2 * self.fano * self.pair_energy_ev * e_ev
-        return np.sqrt(variance) * 1e-3
+        return np.asarray(np.sqrt(variance) * 1e-3)
 
     def sigma_kev(self, energy_kev: ArrayLike) -> NDArray[np.float64]:
         """Gaussian standard deviation, keV, at energies in keV, any shape."""

@@ -18,8 +18,9 @@ from xrfid.batch.engine import GOOD, add_up
 from xrfid.batch.stack import Stack
 from xrfid.batch.work import Progress
 from xrfid.errors import InputError, Untrustworthy
-from xrfid.identify.pipeline import Work, search
-from xrfid.identify.report_parts import assemble
+from xrfid.identify.pipeline import search
+from xrfid.identify.work import Work
+from xrfid.identify.assemble import assemble
 from xrfid.identify.settings import Settings
 from xrfid.instrument import Instrument
 from xrfid.response.series import SeriesKey

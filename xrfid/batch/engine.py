@@ -19,7 +19,9 @@ from xrfid.batch.plan import Plan
 from xrfid.fit.solve import bounded_solve
 
 _ROWS = 256
-NEGATIVE_SIGMA = -4.0
+_OWN_SHAPE_COUNTS = np.float32(100.0)
+"""A point of so many counts is trusted as much as the mean spectrum to say where its counts lie."""
+NEGATIVE_SIGMA = -5.0
 """An area this far below zero is no noise: the point is solved again with areas >= 0."""
 
 GOOD, NOT_FINITE, NEGATIVE, UNREADABLE = 0, 1, 2, 3
@@ -172,13 +174,29 @@ def _fit_rows(
     """Areas, uncertainties and goodness of fit of some spectra."""
     coefficients = y @ plan.projection
     area = coefficients[:, : plan.n_series]
-    variance = y @ plan.squared + plan.least_variance
+    variance = _variances(plan, coefficients, bands.sum(axis=1, keepdims=True))
     below = (area < NEGATIVE_SIGMA * np.sqrt(variance)).any(axis=1)
     for i in np.flatnonzero(below):
         coefficients[i] = _not_negative(plan, coefficients[i])
     result.area[:, rows] = area.T
     result.sigma[:, rows] = np.sqrt(variance + (plan.systematic.astype(np.float32) * area) ** 2).T
     _judge(plan, coefficients, bands, rows, result)
+
+
+def _variances(
+    plan: Plan, coefficients: NDArray[np.float32], counts: NDArray[np.float32]
+) -> NDArray[np.float32]:
+    """Poisson variances of the areas, shape (n, n_series), from counts per point, shape (n, 1).
+
+    The point's own expectation and that of the mean spectrum's shape are averaged with the weights of
+    `_OWN_SHAPE_COUNTS`, and one count is added, so that few counts do not look like certainty.
+    """
+    k = plan.n_series
+    series = np.maximum(coefficients[:, :k], 0.0)
+    own = np.maximum(series @ plan.variances[:k] + coefficients[:, k:] @ plan.variances[k:], 0.0)
+    usual = plan.variance_per_count * counts
+    mixed = (counts * own + _OWN_SHAPE_COUNTS * usual) / (counts + _OWN_SHAPE_COUNTS)
+    return np.asarray(mixed + plan.variance_per_count)
 
 
 def _not_negative(plan: Plan, coefficients: NDArray[np.float32]) -> NDArray[np.float64]:

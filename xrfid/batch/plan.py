@@ -20,7 +20,7 @@ from xrfid.fit.grouping import Grouping
 from xrfid.fit.model import Fit, Ingredients, fit_series
 from xrfid.fit.nuisance import GAIN_PIVOT_KEV, shared_nuisances
 from xrfid.fit.solve import covariance_of
-from xrfid.identify.pipeline import Work
+from xrfid.identify.work import Work
 from xrfid.response.series import SeriesKey
 
 _CONTINUUM_KNOT_KEV = 4.0
@@ -104,13 +104,18 @@ class Plan:
         return out
 
     @cached_property
-    def squared(self) -> NDArray[np.float32]:
-        """Variances of the areas from channels, shape (n_padded, n_series)."""
-        return np.ascontiguousarray(self.projection[:, : self.n_series]) ** 2
+    def variances(self) -> NDArray[np.float32]:
+        """Poisson variances of the areas from coefficients, shape (n_columns, n_series).
+
+        ``(P * P) mu`` with the fitted expectation ``mu``: the same on average as ``(P * P) y``, but it
+        does not swing with the very counts that make an area come out high or low, and costs next to
+        nothing.
+        """
+        return np.asarray(self.columns @ self.grouped_projection[: self.n_series].T ** 2, dtype=np.float32)
 
     @cached_property
-    def least_variance(self) -> NDArray[np.float32]:
-        """Variance that one count, spread like the mean spectrum, brings; shape (n_series,)."""
+    def variance_per_count(self) -> NDArray[np.float32]:
+        """Variance that each count brings if it is spread like the mean spectrum, shape (n_series,)."""
         share = self.mean / self.mean.sum()
         return np.asarray(self.grouped_projection[: self.n_series] ** 2 @ share, dtype=np.float32)
 

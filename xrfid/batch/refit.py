@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xrfid.fit.model import Fit, fit_series
-from xrfid.identify.pipeline import Work
+from xrfid.identify.work import Work
 from xrfid.response.series import SeriesKey
 
 

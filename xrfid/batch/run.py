@@ -30,8 +30,9 @@ from xrfid.batch.stack import Place, Stack
 from xrfid.batch.store import DRIFT_FIELDS, Part, create_part
 from xrfid.batch.work import Progress, Threads, Workers, fit_blocks
 from xrfid.errors import InputError, OutputError
-from xrfid.identify.pipeline import Work, search
-from xrfid.identify.report_parts import assemble, provenance
+from xrfid.identify.pipeline import search
+from xrfid.identify.work import Work
+from xrfid.identify.assemble import assemble, provenance
 from xrfid.identify.result import Identification
 from xrfid.identify.settings import Settings
 from xrfid.instrument import Instrument

@@ -281,7 +281,9 @@ def scattered_continuum(
     return np.asarray(gaussian_filter1d(density, width) * np.diff(edges))
 
 
-def smooth_functions(grouping: Grouping, shape: LineShape, spacing_fwhm: float, least_kev: float) -> NDArray[np.float64]:
+def smooth_functions(
+    grouping: Grouping, shape: LineShape, spacing_fwhm: float, least_kev: float
+) -> NDArray[np.float64]:
     """Cubic B-splines that add up to 1, knots `spacing_fwhm` FWHM apart, shape (n_functions, n)."""
     centres = grouping.centres_kev
     knots = [float(centres[0])]

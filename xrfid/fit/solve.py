@@ -162,7 +162,10 @@ def bounded_solve(
     return x * scale, free
 
 
-def _step_to_bound(x, trial, free, bounded, g, t):  # type: ignore[no-untyped-def]
+def _step_to_bound(
+    x: NDArray[np.float64], trial: NDArray[np.float64], free: NDArray[np.bool_], bounded: NDArray[np.bool_],
+    g: NDArray[np.float64], t: NDArray[np.float64],
+) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:  # fmt: skip
     """Lawson & Hanson's inner loop: move towards `trial` until the first bound, fix it, and repeat."""
     for _ in range(t.size):
         hit = free & bounded & (trial < 0)

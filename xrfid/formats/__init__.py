@@ -43,7 +43,8 @@ def read_spectra(
                 return hdf5.read(source, dataset)
             data = head + handle.read(LARGEST_TEXT_BYTES + 1)
     except OSError as error:
-        raise InputError(str(path), f"cannot be read ({(error.strerror or '').lower()})", "name a file that exists") from None
+        why = (error.strerror or "").lower()
+        raise InputError(str(path), f"cannot be read ({why})", "name a file that exists") from None
     return _chosen(read_bytes(str(path), data, layout=layout), str(path), dataset)
 
 

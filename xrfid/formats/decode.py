@@ -12,7 +12,7 @@ MOST_CHANNELS = 65_536
 
 
 def decoded(name: str, data: bytes) -> str:
-    """Decode UTF-8, UTF-16 (with a mark or recognisable) or Latin-1; line ends become ``\\n``.
+    r"""Decode UTF-8, UTF-16 (with a mark or recognisable) or Latin-1; line ends become ``\n``.
 
     Raises
     ------

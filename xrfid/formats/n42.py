@@ -42,7 +42,7 @@ def read(name: str, data: bytes) -> tuple[Spectrum, ...]:
     scales = {e.get("id", ""): _scale(name, e) for e in _all(root, "EnergyCalibration")}
     only = next(iter(scales.values())) if len(scales) == 1 else None
     measurements = _all(root, "RadMeasurement") + _all(root, "Measurement")
-    found = []
+    found: list[Spectrum] = []
     for measurement in measurements or [root]:
         for element in _all(measurement, "Spectrum"):
             found.append(_spectrum(name, measurement, element, scales, only, len(found) + 1))

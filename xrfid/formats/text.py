@@ -215,10 +215,10 @@ def _calibration(contents: _Contents, spectrum: _Block) -> tuple[EnergyScale | N
             if scale is not None:
                 return scale, [f"energy scale from {len(block.rows)} calibration points of the file"]
         if _CALIBRATION.search(block.section) and len(block.rows) == 1 and len(block.rows[0]) in (2, 3):
-            offset, gain, *rest = block.rows[0]
-            if 5e-4 < gain < 0.5:
+            first, second, *rest = block.rows[0]
+            if 5e-4 < second < 0.5:
                 quadratic = rest[0] if rest else 0.0
-                return EnergyScale(offset, gain, quadratic), ["energy scale from the coefficients of the file"]
+                return EnergyScale(first, second, quadratic), ["energy scale from the coefficients of the file"]
     gain = _first_number(contents.statements, r"gain|slope|per chan|channel width|xperchan|steigung")
     offset = _first_number(contents.statements, r"offset|intercept|zero")
     if gain is not None and gain > 0:

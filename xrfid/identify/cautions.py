@@ -3,12 +3,9 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from typing import TYPE_CHECKING
 
 from xrfid.identify.result import Finding, Verdict
-
-if TYPE_CHECKING:
-    from xrfid.identify.pipeline import Work
+from xrfid.identify.work import Work
 
 HAZARDOUS = ("As", "Hg", "Pb", "Cd", "Tl", "U", "Th", "Be", "Br")
 _STANDING = (

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
 from numpy.typing import NDArray
 
@@ -13,11 +11,12 @@ from xrfid.fit.nuisance import Tolerances
 from xrfid.fit.refine import refined
 from xrfid.fit.setup import Setting, ingredients
 from xrfid.identify.anode import AnodeInSample, anode_in_sample
+from xrfid.identify.assemble import assemble
 from xrfid.identify.challenge import exchange, unmask_peaks
-from xrfid.identify.report_parts import assemble
-from xrfid.identify.result import Calibration, Identification
+from xrfid.identify.result import Identification
 from xrfid.identify.select import backward, forward, free_peaks
 from xrfid.identify.settings import Settings
+from xrfid.identify.work import Work, fixed_series
 from xrfid.instrument import Instrument
 from xrfid.prepare.establish import establish
 from xrfid.response.detector import LineShape
@@ -28,29 +27,6 @@ _FIRST_PASS = 12.0
 """Significance for the first pass, which only has to find what shapes the spectrum."""
 _PEAK_SIGNIFICANCE = 6.0
 _SCATTER_FROM_KEV = 5.0
-
-
-@dataclass(frozen=True, eq=False)
-class Work:
-    """Everything that one identification has found so far; each step returns a new one."""
-
-    spectrum: Spectrum
-    instrument: Instrument
-    settings: Settings
-    calibration: Calibration
-    prediction: Prediction
-    setting: Setting
-    composition: Composition
-    ingredients: Ingredients
-    fit: Fit
-    anode: AnodeInSample
-    candidates: tuple[SeriesKey, ...]
-    threshold: float
-
-    @property
-    def fixed(self) -> tuple[SeriesKey, ...]:
-        """Series that are in the model whatever the counts say."""
-        return _fixed(self.ingredients, self.instrument, self.settings)
 
 
 def identify(spectrum: Spectrum, instrument: Instrument | None = None, settings: Settings | None = None) -> Identification:
@@ -88,8 +64,9 @@ def search(spectrum: Spectrum, instrument: Instrument, settings: Settings) -> Wo
     fractions = prediction.light_matrix_only()
     kept: tuple[SeriesKey, ...] = ()
     anode = AnodeInSample()
+    fit: Fit | None = None
     for enter, known in ((_FIRST_PASS, False), (threshold, True), (threshold, True)):
-        if kept:
+        if fit is not None:
             setting = refined(setting, fit)
         tolerances = Tolerances(matrix_known=known)
         drawn = ingredients(spectrum, prediction, fractions, setting, tolerances, anode.expected)
@@ -98,6 +75,7 @@ def search(spectrum: Spectrum, instrument: Instrument, settings: Settings) -> Wo
         kept = (*fit.keys, *(k for k in anode.series if k not in fit.areas))
         composition = _composition(prediction, drawn, fit, anode)
         fractions = composition.fractions
+    assert fit is not None
     return Work(spectrum, instrument, settings, calibration, prediction, setting, composition, drawn, fit, anode,
                 candidates, threshold)  # fmt: skip
 
@@ -107,7 +85,7 @@ def _select(
     settings: Settings, enter: float, thorough: bool,
 ) -> tuple[Ingredients, Fit]:  # fmt: skip
     """One pass of selection; a thorough one also looks for peaks that no line explains."""
-    fixed = _fixed(drawn, instrument, settings)
+    fixed = fixed_series(drawn, instrument, settings)
     start = (*fixed, *(k for k in kept if k in drawn.columns and k not in fixed))
     fit = forward(drawn, start, candidates, enter, handicap=settings.handicap)
     fit = backward(drawn, fit, fixed, enter)
@@ -120,15 +98,6 @@ def _select(
             fit = backward(drawn, fit_series(drawn, fit.keys, fit, rounds=1), fixed, enter)
         drawn, fit = unmask_peaks(drawn, fit, fixed)
     return drawn, fit
-
-
-def _fixed(drawn: Ingredients, instrument: Instrument, settings: Settings) -> tuple[SeriesKey, ...]:
-    """Argon of the air, stray elements and elements known to be present."""
-    names = set(settings.present) | set(instrument.stray.elements)
-    air = instrument.path.atmosphere == "air" and "Ar" not in settings.absent
-    return tuple(
-        k for k in drawn.columns.keys if (k.element in names or (air and k.element == "Ar" and k.series == "K"))
-    )
 
 
 def _composition(prediction: Prediction, drawn: Ingredients, fit: Fit, anode: AnodeInSample) -> Composition:

@@ -58,7 +58,7 @@ def smoothed(counts: NDArray[np.float64], width_channels: float) -> NDArray[np.f
     if half == 0:
         return counts
     total = np.concatenate([[0.0], np.cumsum(np.pad(counts, half, mode="edge"))])
-    return (total[2 * half + 1 :] - total[: -2 * half - 1]) / (2 * half + 1)
+    return np.asarray((total[2 * half + 1 :] - total[: -2 * half - 1]) / (2 * half + 1))
 
 
 def continuum(counts: NDArray[np.float64], scale: EnergyScale, resolution: Resolution) -> NDArray[np.float64]:

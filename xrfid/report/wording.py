@@ -6,7 +6,7 @@ import math
 from collections.abc import Sequence
 from itertools import takewhile
 
-from xrfid.atoms.lines import line_name
+from xrfid.atoms.lines import line_name as line_name
 from xrfid.identify.result import Finding, Identification, Verdict
 
 GROUP_SPACE = "\N{NARROW NO-BREAK SPACE}"

@@ -8,6 +8,7 @@ shelf on the low side, each a fraction of the line's area that falls with energy
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from dataclasses import dataclass, field, replace
 from functools import lru_cache
 
@@ -218,7 +219,10 @@ def _tail_table(slope: float) -> tuple[NDArray[np.float64], NDArray[np.float64]]
     return u, ndtr(u) + np.where(u < -8.0, np.exp(u * k + 0.5 * k**2), folded)
 
 
-def _scatter(lines, sigma, below, above, edges_kev, n_columns, cdf):  # type: ignore[no-untyped-def]
+def _scatter(
+    lines: DrawnLines, sigma: NDArray[np.float64], below: NDArray[np.float64], above: NDArray[np.float64],
+    edges_kev: NDArray[np.float64], n_columns: int, cdf: Callable[[NDArray[np.float64]], NDArray[np.float64]],
+) -> NDArray[np.float64]:  # fmt: skip
     """Integrate a unit profile over the channels near each line and add it to the line's column."""
     n = edges_kev.size - 1
     first = np.clip(np.searchsorted(edges_kev, lines.energy_kev - below) - 1, 0, n)
@@ -236,7 +240,8 @@ def _scatter(lines, sigma, below, above, edges_kev, n_columns, cdf):  # type: ig
     inside = owner[1:] == owner[:-1]
     owner, place, step = owner[:-1][inside], place[:-1][inside], step[inside]
     flat = lines.column[owner] * n + place
-    return np.bincount(flat, step * lines.weight[owner], minlength=n_columns * n).reshape(n_columns, n)
+    drawn = np.bincount(flat, step * lines.weight[owner], minlength=n_columns * n)
+    return np.asarray(drawn, dtype=float).reshape(n_columns, n)
 
 
 def draw_shelf(lines: DrawnLines, edges_kev: NDArray[np.float64], n_columns: int) -> NDArray[np.float64]:

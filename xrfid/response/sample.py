@@ -38,7 +38,7 @@ def mass_fractions(composition: Mapping[str, float]) -> NDArray[np.float64]:
         out[ATOMIC_NUMBER[symbol] - 1] += amount
     if not out.sum() > 0:
         raise ValueError("a composition needs at least one element with an amount > 0")
-    return out / out.sum()
+    return np.asarray(out / out.sum())
 
 
 def composition_of(fractions: NDArray[np.float64]) -> dict[str, float]:

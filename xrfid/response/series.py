@@ -18,7 +18,7 @@ from xrfid.atoms.lines import GROUPS, LineTable, line_table
 from xrfid.instrument import Instrument
 from xrfid.response.detector import efficiency
 from xrfid.response.excitation import Excitation, excitation
-from xrfid.response.sample import Layer, enhancement, escape_depth, sines
+from xrfid.response.sample import LIGHT_MATRIX, Layer, enhancement, escape_depth, sines
 from xrfid.response.scatter import Scattered, ScatterModel
 
 
@@ -189,8 +189,6 @@ class Prediction:
 
     def light_matrix_only(self) -> NDArray[np.float64]:
         """Mass fractions (92,) of the light matrix alone: the first guess when nothing is known."""
-        from xrfid.response.sample import LIGHT_MATRIX
-
         out = np.zeros(ALL_Z.size)
         for z, w in LIGHT_MATRIX.items():
             out[z - 1] = w

@@ -4,19 +4,19 @@ from __future__ import annotations
 
 import platform
 from dataclasses import replace
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from xrfid.atoms.elements import symbol
+from xrfid.atoms.lines import line_name
 from xrfid.fit.model import Fit
 from xrfid.identify.artefacts import artefacts, loose_peaks
 from xrfid.identify.cautions import assumptions, cautions
 from xrfid.identify.evidence import ElementEvidence, gather
 from xrfid.identify.limits import CharacteristicLimits, characteristic_limits, limits_in_fit
 from xrfid.identify.result import (
-    Calibration,
     Curves,
     Evidence,
     Finding,
@@ -28,11 +28,10 @@ from xrfid.identify.result import (
 )
 from xrfid.identify.select import local_misfit
 from xrfid.identify.verdict import decide
-from xrfid.response.sample import composition_of
+from xrfid.identify.work import Work
+from xrfid.prepare.calibration import Calibration
+from xrfid.response.sample import LIGHT_MATRIX, composition_of
 from xrfid.response.series import SeriesKey
-
-if TYPE_CHECKING:
-    from xrfid.identify.pipeline import Work
 
 
 def assemble(work: Work) -> Identification:
@@ -195,13 +194,38 @@ def _source(work: Work) -> Source:
 
 
 def _calibration(work: Work) -> Calibration:
-    return replace(work.calibration, scale=work.setting.scale, resolution=work.setting.shape.resolution)
+    """The calibration in force, with what the strong lines say of it."""
+    residuals = _line_residuals(work)
+    weight = np.array([sigma**-2 for *_, sigma in residuals])
+    squares = np.array([residual**2 for _, _, residual, _ in residuals])
+    rms = float(np.sqrt(np.sum(weight * squares) / np.sum(weight))) if residuals else work.calibration.rms_ev
+    return replace(
+        work.calibration,
+        scale=work.setting.scale,
+        resolution=work.setting.shape.resolution,
+        rms_ev=rms,
+        residuals=residuals,
+    )
+
+
+def _line_residuals(work: Work) -> tuple[tuple[str, float, float, float], ...]:
+    """Name, energy (keV), residual and its standard uncertainty (eV) of the line groups that fix the scale."""
+    fit, found = work.fit, []
+    for key in fit.keys:
+        for group in work.ingredients.groups(key) if fit.areas[key] > 30.0 else ():
+            label = ("shift", str(key), group.name)
+            if label not in fit.labels:
+                continue
+            i = fit.labels.index(label)
+            sigma = float(np.sqrt(max(fit.solution.covariance[i, i], 0.0)))
+            if 0.0 < sigma < 0.5 * group.shift_ev:  # the counts say more than the tolerance
+                residual = float(fit.solution.coefficients[i])
+                found.append((f"{key.element} {line_name(group.name)}", group.energy_kev, residual, sigma))
+    return tuple(sorted(found, key=lambda r: r[1]))
 
 
 def _named(fractions: NDArray[np.float64], light: float) -> dict[str, float]:
     """Mass fractions by symbol, the light matrix taken together."""
-    from xrfid.response.sample import LIGHT_MATRIX
-
     own = fractions.copy()
     for z, w in LIGHT_MATRIX.items():
         own[z - 1] = max(own[z - 1] - light * w, 0.0)
