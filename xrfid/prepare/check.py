@@ -6,6 +6,7 @@ these, moved by a straight line. What that cannot settle is left to the full sea
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -14,6 +15,7 @@ from numpy.typing import NDArray
 from xrfid.prepare.patterns import Patterns
 from xrfid.prepare.peaks import CHANNEL_VARIANCE, Peak, Widths, refit
 from xrfid.prepare.reduced import BINS_PER_FWHM, reduce
+from xrfid.prepare.snip import smoothed
 from xrfid.prepare.sieve import Sieve
 from xrfid.spectrum import FWHM_PER_SIGMA, EnergyScale, Resolution
 
@@ -51,6 +53,7 @@ class Look:
 def look(counts: NDArray[np.float64], scale: EnergyScale, resolution: Resolution, patterns: Patterns,
          escape_kev: float) -> Look:  # fmt: skip
     """Compare a stated scale with the peaks."""
+    resolution = _as_wide_as_the_tallest(counts, scale, resolution)
     widths = widths_on(scale, resolution)
     reduced = reduce(counts, widths)
     peaks = _maxima(reduced.net, reduced.variance, reduced.centres, widths)
@@ -64,6 +67,25 @@ def look(counts: NDArray[np.float64], scale: EnergyScale, resolution: Resolution
     shift = float(np.median(energy[sure] - scale.energy_kev(at[sure]))) if sure.size else 0.0
     away = np.where(value[:_FITTED] > 0, np.abs(energy[:_FITTED] - scale.energy_kev(at[:_FITTED])), 1.0)
     return Look(len(peaks), covered, shift, float(np.sort(away)[1]), _noise([f for f in fits if f.area > 0], scale, resolution))
+
+
+def _as_wide_as_the_tallest(counts: NDArray[np.float64], scale: EnergyScale, resolution: Resolution) -> Resolution:
+    """The resolution, widened if the tallest peak is much wider at half its height."""
+    low = int(np.clip(scale.channel(1.0), 0, counts.size - 16))
+    fwhm = float(widths_on(scale, resolution).fwhm(0.5 * counts.size))
+    smooth = smoothed(counts, 0.6 * fwhm)
+    top = low + int(np.argmax(smooth[low : counts.size - 2]))
+    half = 0.5 * smooth[top]
+    left = np.flatnonzero(smooth[:top] < half)
+    right = np.flatnonzero(smooth[top:] < half)
+    if half < 10.0 or not left.size or not right.size:
+        return resolution
+    seen = 2.0 * min(top - float(left[-1]), float(right[0])) * scale.gain_kev
+    usual = float(resolution.fwhm_kev(max(float(scale.energy_kev(top)), 0.5)))
+    if not 1.4 * usual < seen < 1.0:
+        return resolution
+    noise = math.sqrt((resolution.noise_ev * 1e-3) ** 2 + seen**2 - usual**2)
+    return Resolution(noise * 1e3, resolution.fano, resolution.pair_energy_ev)
 
 
 def _noise(peaks: list[Peak], scale: EnergyScale, resolution: Resolution) -> float | None:

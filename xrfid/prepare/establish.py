@@ -145,6 +145,9 @@ def _looked_into(spectrum: Spectrum, stated: _Stated, seen: Look, instrument: In
         resolution, worn = _resolution(None, instrument)
         return Calibration(stated.usable, resolution, stated.origin, 0.0, _joined(stated.note, worn))
     near = _near(search, stated.usable)
+    moved = _shift(search, near.scale, stated.usable)[0]
+    if abs(moved) > _ANOTHER_ELEMENT_KEV:
+        return _near_by(search, stated, instrument)
     if near.trial.explained > _WELL and seen.covered > 0.4:
         return _corrected(near, search, stated, instrument)
     try:
@@ -156,8 +159,45 @@ def _looked_into(spectrum: Spectrum, stated: _Stated, seen: Look, instrument: In
     return _corrected(found.best, search, stated, instrument)
 
 
+def _near_by(search: Search, stated: _Stated, instrument: Instrument) -> Calibration:
+    """The lines may belong to the neighbouring elements: all scales around the stated one are tried.
+
+    If two of them do as well, which element stands for which peak cannot be told, and the stated scale stays.
+    """
+    assert stated.usable is not None
+    channels = np.array(sorted(p.channel for p in search.real[:6]))
+    low, high = float(channels[0]), float(channels[-1])
+    around = []
+    for at_low in _AROUND_KEV:
+        for at_high in _AROUND_KEV:
+            first, last = (float(stated.usable.energy_kev(c)) + d for c, d in ((low, at_low), (high, at_high)))
+            gain = (last - first) / (high - low)
+            around.append(EnergyScale(first - gain * low, gain))
+    try:
+        found = decide(search, search.best([*around, *search.hypotheses()]))
+    except Untrustworthy:
+        resolution, worn = _resolution(None, instrument)
+        note = (
+            f"{stated.whose} does not fit the peaks, but this spectrum cannot say what the right one is; used as "
+            "stated; calibrate on known elements"
+        )
+        return Calibration(stated.usable, resolution, stated.origin, 0.0, _joined(_joined(stated.note, note), worn))
+    return _corrected(found.best, search, stated, instrument)
+
+
+_AROUND_KEV = (-0.45, -0.22, 0.0, 0.22, 0.45)
+_ANOTHER_ELEMENT_KEV = 0.1
+"""From such a shift on the neighbouring element's lines may be meant."""
 _WELL = 0.9
 """Share of the peaks explained near the stated scale that makes a search for others needless."""
+
+
+def _shift(search: Search, new: EnergyScale, old: EnergyScale) -> tuple[float, float]:
+    """Largest change of energy at a strong peak, keV, and that peak's channel."""
+    at = np.array([p.channel for p in search.real[:6]])
+    change = new.energy_kev(at) - old.energy_kev(at)
+    worst = int(np.argmax(np.abs(change)))
+    return float(change[worst]), float(at[worst])
 
 
 def _near(search: Search, scale: EnergyScale) -> Candidate:
@@ -169,11 +209,9 @@ def _corrected(candidate: Candidate, search: Search, stated: _Stated, instrument
                ) -> Calibration:  # fmt: skip
     """Keep the stated scale, or replace it and say by how much it was off."""
     assert stated.usable is not None
-    at = np.array([p.channel for p in search.real[:6]])
-    shift = candidate.scale.energy_kev(at) - stated.usable.energy_kev(at)
-    worst = int(np.argmax(np.abs(shift)))
-    sigma = candidate.polished.offset_sigma_kev + candidate.polished.gain_sigma_kev * float(at[worst])
-    wrong = abs(shift[worst]) > max(CLEAR_SHIFT_KEV, 4.0 * min(sigma, 0.05))
+    shift, channel = _shift(search, candidate.scale, stated.usable)
+    sigma = candidate.polished.offset_sigma_kev + candidate.polished.gain_sigma_kev * channel
+    wrong = abs(shift) > max(CLEAR_SHIFT_KEV, 4.0 * min(sigma, 0.05))
     if doubtful and (not wrong or candidate.trial.explained < _WELL - 0.1):
         resolution, worn = _resolution(None, instrument)
         note = f"{stated.whose} could not be confirmed from the peaks; used as stated"
@@ -182,8 +220,8 @@ def _corrected(candidate: Candidate, search: Search, stated: _Stated, instrument
         made = _from_candidate(candidate, stated.note, instrument)
         return replace(made, scale=stated.usable, origin=stated.origin)
     note = (
-        f"{stated.whose} does not fit the peaks ({-shift[worst] * 1e3:+.0f} eV off at "
-        f"{float(candidate.scale.energy_kev(at[worst])):.2f} keV); corrected from them"
+        f"{stated.whose} does not fit the peaks ({-shift * 1e3:+.0f} eV off at "
+        f"{float(candidate.scale.energy_kev(channel)):.2f} keV); corrected from them"
     )
     made = _from_candidate(candidate, _joined(stated.note, note), instrument)
     return replace(made, stated=stated.scale)

@@ -7,31 +7,35 @@ scale is returned only if it is well ahead of every different one.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Iterable
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
 from xrfid.errors import Untrustworthy
 from xrfid.instrument import Instrument
+from xrfid.prepare.end_point import end_cost, stop_channel
 from xrfid.prepare.patterns import Patterns, patterns_of
 from xrfid.prepare.peaks import Peak, Widths, find_peaks
 from xrfid.prepare.polish import Polished, polish
 from xrfid.prepare.reduced import Reduced, reduce
 from xrfid.prepare.sieve import Grid, Sieve, grid_of
-from xrfid.prepare.trial import Bench, Trial, cost
+from xrfid.prepare.trial import Bench, Trial
 from xrfid.response.detector import LineShape, escape_lines
 from xrfid.spectrum import FANO_FACTOR, MN_KA_KEV, PAIR_ENERGY_EV, EnergyScale
 
-FWHM_MN_KEV = {"Si": (0.105, 0.36), "Ge": (0.095, 0.36), "CdTe": (0.13, 0.9)}
+FWHM_MN_KEV = {"Si": (0.105, 0.75), "Ge": (0.095, 0.75), "CdTe": (0.13, 0.95)}
 """Width at Mn K-alpha that a working detector can have (common practice, no source)."""
-LEAST_LEAD = 30.0
+LEAST_LEAD = 60.0
 """Deviance by which the best scale must beat every different one."""
 LEAST_LEAD_SHARE = 0.05
 """The same as a share of what the best scale explains, for spectra with so many counts that every model misfits."""
+WIDE_EV = 300.0
+"""From this width at Mn K-alpha on neighbouring elements look alike, and the lead must be twice as large."""
 LEAST_EXPLAINED = 0.8
 _ALIGNED = 700
-_SIEVED, _MOVED, _POLISHED = 28, 9, 3
+_SIEVED, _MOVED, _POLISHED = 28, 9, 5
 
 
 @dataclass(frozen=True, eq=False)
@@ -69,12 +73,15 @@ class Search:
         material = instrument.detector.material
         self.fano, self.pair_ev = FANO_FACTOR[material], PAIR_ENERGY_EV[material]
         self.escape_kev = max(escape_lines(material), key=lambda line: line.share * line.yield_).loss_kev
-        self.bounds = FWHM_MN_KEV[material]
+        stated = instrument.detector.fwhm_mn_ka_ev
+        self.bounds = FWHM_MN_KEV[material] if stated is None else (0.7e-3 * stated, 1.8e-3 * stated)
+        self.usual = instrument.detector.resolution.fwhm_mn_ka_ev * 1e-3
         self.reduced: Reduced = reduce(counts, self.widths)
         known = instrument.tube is not None and "anode" in instrument.tube.model_fields_set
         self.patterns: Patterns = patterns_of(instrument, end_kev, known)
         self.end_kev = end_kev
-        self.bench = Bench(self.reduced, self.patterns, material, self.fano, self.pair_ev)
+        self._stop, self._stops = stop_channel(counts)
+        self.bench = Bench(self.reduced, self.patterns, material, self.fano, self.pair_ev, self.usual)
 
     def noise(self, scale: EnergyScale) -> float:
         """Squared electronic FWHM, keV squared, that the strong peaks mean on a scale, within the detector's bounds."""
@@ -83,13 +90,24 @@ class Search:
         fano = self.bench.slope * MN_KA_KEV
         return float(np.clip(np.median(square), self.bounds[0] ** 2 - fano, self.bounds[1] ** 2 - fano))
 
+    def end_cost(self, offset_kev: NDArray[np.float64], gain_kev: NDArray[np.float64]) -> NDArray[np.float64]:
+        """What scales cost because of where the spectrum stops, in deviance."""
+        return end_cost(offset_kev + gain_kev * self._stop, self._stops, self.end_kev)
+
+    def _tried(self, scale: EnergyScale) -> tuple[float, Trial]:
+        """A first trial, and its score with the cost of the spectrum's end."""
+        cost = float(self.end_cost(np.array(scale.offset_kev), np.array(scale.gain_kev)))
+        trial = self.bench.try_out(scale, self.noise(scale), 6, 1)
+        return trial.score + cost, trial
+
     def hypotheses(self) -> list[EnergyScale]:
         """The scales that the sieve leaves, best first, no two alike."""
         at = np.array(sorted(p.channel for p in self.real[:5]))
-        grid = grid_of(self.real, (at, self.widths.fwhm(at)), self.bench.slope, self.bounds, self.end_kev)
+        grid = grid_of(self.real, (at, self.widths.fwhm(at)), self.bench.slope, self.bounds, self.usual, self.end_kev)
+        grid = Grid(grid.offset_kev, grid.gain_kev, grid.cost + 0.25 * self.end_cost(grid.offset_kev, grid.gain_kev))
         sieve = Sieve(self.reduced, self.patterns, self.real, self.escape_kev)
         best = np.argsort(-sieve.scores(grid))[:_ALIGNED]
-        grid, scores = sieve.aligned(Grid(grid.offset_kev[best], grid.gain_kev[best]))
+        grid, scores = sieve.aligned(grid.part(best))
         order = np.argsort(-scores)
         low, high = at[0], max(p.channel for p in self.real[:8])
         kept: list[EnergyScale] = []
@@ -104,20 +122,23 @@ class Search:
     def _fwhm(self, scale: EnergyScale, at: tuple[float, float]) -> float:
         return float(np.min(self.widths.fwhm(np.array(at)))) * scale.gain_kev
 
-    def best(self, extra: tuple[EnergyScale, ...] = ()) -> list[Trial]:
-        """Trials of the most promising scales, polished, best first; `extra` scales are always among those moved."""
-        bench = self.bench
-        first = [bench.try_out(s, self.noise(s), 6, 1) for s in self.hypotheses()]
-        first.sort(key=lambda t: t.score)
-        first = first[:_MOVED] + [bench.try_out(s, self.noise(s), 6, 1) for s in extra]
-        moved = sorted((bench.refined(t, 2, 7) for t in first), key=lambda t: t.score)
-        polished: list[Trial] = []
+    def best(self, scales: Iterable[EnergyScale]) -> list[Trial]:
+        """Trials of the most promising of some scales, moved to where their lines fit, best first, no two alike."""
+        first = sorted((self._tried(s) for s in scales), key=lambda t: t[0])[:_MOVED]
+        moved = sorted((self._moved(t, 2, 7) for _, t in first), key=lambda t: t.score)
+        kept: list[Trial] = []
         for trial in moved:
-            if all(different(trial.scale, p.scale) for p in polished):
-                polished.append(bench.refined(bench.try_out(trial.scale, trial.noise), 3))
-            if len(polished) == _POLISHED:
+            if all(different(trial.scale, p.scale) for p in kept):
+                kept.append(self._moved(self.bench.try_out(trial.scale, trial.noise), 3, 14))
+            if len(kept) == _POLISHED:
                 break
-        return sorted(polished, key=lambda t: t.score)
+        return sorted(kept, key=lambda t: t.score)
+
+    def _moved(self, trial: Trial, rounds: int, most: int) -> Trial:
+        """A trial refined, its score with the cost of the spectrum's end."""
+        moved = self.bench.refined(trial, rounds, most)
+        cost = float(self.end_cost(np.array(moved.scale.offset_kev), np.array(moved.scale.gain_kev)))
+        return replace(moved, score=moved.score + cost)
 
     def polished(self, trial: Trial) -> Candidate:
         """A trial with its exact scale, width and score."""
@@ -127,7 +148,8 @@ class Search:
         shape = LineShape.of(self.detector).with_resolution(trial.resolution(self.fano, self.pair_ev))
         most = self.bounds[1]
         made = polish(self.reduced, self.patterns, trial.chosen, shape, trial.scale, self.detector.material, most)
-        score = made.chi2 * self.reduced.net.size + cost(self.patterns, list(trial.chosen), made.scale)
+        score = made.chi2 * self.reduced.net.size + self.bench.cost(list(trial.chosen), made.scale, (made.resolution.noise_ev * 1e-3) ** 2)
+        score += float(self.end_cost(np.array(made.scale.offset_kev), np.array(made.scale.gain_kev)))
         return Candidate(trial, made, score)
 
 
@@ -168,11 +190,12 @@ def find_scale(counts: NDArray[np.float64], instrument: Instrument, end_kev: flo
 def search_trials(search: Search, extra: tuple[EnergyScale, ...] = ()) -> list[Trial]:
     """Try scales; refuse when there is nothing to try them on."""
     if len(search.real) < 2:
-        raise Untrustworthy(f"no energy scale: {len(search.real)} peaks stand out, which is too few to find it; give the scale")
-    trials = search.best(extra)
-    if not trials:
-        raise Untrustworthy("no energy scale: no scale puts the peaks at possible widths below the source's end; give the scale")
-    return trials
+        few = "no peak stands" if not search.real else "only one peak stands"
+        raise Untrustworthy(f"no energy scale: {few} out, which is too little to find it; give the scale")
+    scales = [*search.hypotheses(), *extra]
+    if not scales:
+        raise Untrustworthy("no energy scale: none puts the peaks at possible widths below the source's end; give the scale")
+    return search.best(scales)
 
 
 def decide(search: Search, trials: list[Trial]) -> Found:
@@ -183,7 +206,10 @@ def decide(search: Search, trials: list[Trial]) -> Found:
     if best.trial.explained < LEAST_EXPLAINED or not best.trial.chosen:
         raise Untrustworthy("no energy scale: no set of element lines explains the peaks; give the scale or one known element")
     lead = np.inf if rival is None else rival.score - best.score
-    if rival is not None and lead < LEAST_LEAD + LEAST_LEAD_SHARE * abs(best.score):
+    needed = LEAST_LEAD + LEAST_LEAD_SHARE * abs(best.score)
+    if best.polished.resolution.fwhm_mn_ka_ev > WIDE_EV:
+        needed *= 2.0
+    if rival is not None and lead < needed:
         raise Untrustworthy(
             f"no energy scale: two explain the peaks equally well: {_words(search, best)}, or {_words(search, rival)}; "
             "give the scale or one known element"

@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from xrfid.prepare.end_point import without_overflow
 from xrfid.prepare.peaks import Widths
 from xrfid.prepare.snip import smoothed, snip
 
@@ -81,9 +82,7 @@ def reduce(counts: NDArray[np.float64], widths: Widths) -> Reduced:
 
 def _starts(counts: NDArray[np.float64], widths: Widths) -> NDArray[np.intp]:
     """Boundaries of the bins: to a fifth beyond the last counts, the overflow channel left out."""
-    n = counts.size
-    if n > 64 and counts[n - 1] > 5.0 * (counts[n - 8 : n - 1].max() + 3.0):
-        n -= 1
+    n = without_overflow(counts)
     total = np.cumsum(counts[:n])
     last = int(np.searchsorted(total, total[-1] - max(3.0, 2e-5 * total[-1]))) + 1
     last = min(int(1.2 * last) + 16, n)

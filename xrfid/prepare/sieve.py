@@ -29,14 +29,19 @@ _CHUNK = 4000
 
 @dataclass(frozen=True, eq=False)
 class Grid:
-    """Offsets and gains to try (keV), shape (n_scales,) each."""
+    """Offsets and gains to try (keV), and what each costs for being unusual, shape (n_scales,) each."""
 
     offset_kev: NDArray[np.float64]
     gain_kev: NDArray[np.float64]
+    cost: NDArray[np.float64]
+
+    def part(self, which: NDArray[np.intp] | slice) -> Grid:
+        """Some of the scales."""
+        return Grid(self.offset_kev[which], self.gain_kev[which], self.cost[which])
 
 
 def grid_of(peaks: list[Peak], widths: tuple[NDArray[np.float64], NDArray[np.float64]], slope_kev: float,
-            fwhm_mn_kev: tuple[float, float], end_kev: float | None) -> Grid:  # fmt: skip
+            fwhm_mn_kev: tuple[float, float], usual_kev: float, end_kev: float | None) -> Grid:  # fmt: skip
     """Scales on which the strongest peaks have possible widths and lie below the source's end.
 
     Parameters
@@ -48,6 +53,8 @@ def grid_of(peaks: list[Peak], widths: tuple[NDArray[np.float64], NDArray[np.flo
         Squared FWHM per keV at the Fano limit.
     fwhm_mn_kev : tuple of float
         Least and greatest FWHM at Mn K-alpha.
+    usual_kev : float
+        Usual FWHM at Mn K-alpha.
     end_kev : float or None
     """
     channel, fwhm = widths
@@ -55,7 +62,7 @@ def grid_of(peaks: list[Peak], widths: tuple[NDArray[np.float64], NDArray[np.flo
     step = _STEP_FWHM * float(fwhm[-1]) / max(lever, 10.0 * float(fwhm[-1]))
     gains = np.exp(np.arange(math.log(GAIN_KEV[0]), math.log(GAIN_KEV[1]), step))
     # the offset's step follows the narrowest width in keV
-    found_o, found_g = [], []
+    found_o, found_g, found_c = [], [], []
     top = sorted(p.channel for p in peaks[:3])[-1]
     for gain in gains:
         offset = np.arange(-OFFSET_KEV, OFFSET_KEV, max(_STEP_FWHM * float(fwhm[0]) * gain, 0.012))
@@ -69,7 +76,9 @@ def grid_of(peaks: list[Peak], widths: tuple[NDArray[np.float64], NDArray[np.flo
             ok &= offset + gain * top < 1.03 * end_kev
         found_o.append(offset[ok])
         found_g.append(np.full(int(ok.sum()), gain))
-    return Grid(np.concatenate(found_o), np.concatenate(found_g))
+        width = np.log(np.sqrt(np.maximum(at_mn[ok].mean(axis=1), 1e-3)) / usual_kev)
+        found_c.append(2.0 * np.log1p((offset[ok] / 0.1) ** 2) + 6.0 * width**2)
+    return Grid(np.concatenate(found_o), np.concatenate(found_g), np.concatenate(found_c))
 
 
 class Sieve:
@@ -111,6 +120,7 @@ class Sieve:
         for low in range(0, out.size, _CHUNK):
             part = slice(low, low + _CHUNK)
             out[part] = self._chunk(grid.offset_kev[part], grid.gain_kev[part])
+        out -= grid.cost
         return out
 
     def aligned(self, grid: Grid) -> tuple[Grid, NDArray[np.float64]]:
@@ -127,12 +137,12 @@ class Sieve:
             grid = self._regressed(grid, value * self._weight[:-1], energy)
         value, _ = self._reached(grid, 0.2)
         value = np.maximum(value, self._secondary(grid.offset_kev, grid.gain_kev, 0.2))
-        return grid, value @ self._weight[:-1] - _unusual(grid.offset_kev)
+        return grid, value @ self._weight[:-1] - grid.cost
 
     def one(self, scale: EnergyScale, closeness: float
             ) -> tuple[float, NDArray[np.float64], NDArray[np.float64]]:  # fmt: skip
         """Share of the peaks' weight that a single scale explains; per peak how well, and its line's energy."""
-        grid = Grid(np.array([scale.offset_kev]), np.array([scale.gain_kev]))
+        grid = Grid(np.array([scale.offset_kev]), np.array([scale.gain_kev]), np.zeros(1))
         lines, energy = self._reached(grid, closeness)
         value = np.maximum(lines, self._secondary(grid.offset_kev, grid.gain_kev, closeness))
         return float((value @ self._weight[:-1])[0] / max(float(self._weight.sum()), 1e-9)), lines[0], energy[0]
@@ -165,7 +175,7 @@ class Sieve:
         good = (np.count_nonzero(weight > 0, axis=1) > 1) & (np.abs(gain / grid.gain_kev - 1.0) < 0.05)
         gain = np.where(good, gain, grid.gain_kev)
         offset = np.where(good, mean_e - gain * mean_c, grid.offset_kev)
-        return Grid(offset, gain)
+        return Grid(offset, gain, grid.cost)
 
     def _reached(self, grid: Grid, closeness: float) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Per scale and peak: how well its best line explains it, and that line's energy."""
@@ -191,7 +201,7 @@ class Sieve:
         row = np.broadcast_to(scale[:, None], slot.shape)
         np.maximum.at(covered, (row[hit], slot[hit]), reach[hit])
         covered[:, :-1] = np.maximum(covered[:, :-1], self._secondary(offset, gain, 0.4))
-        return np.asarray(covered @ self._weight - _unusual(offset))
+        return np.asarray(covered @ self._weight)
 
     def _hits(self, offset: NDArray[np.float64], gain: NDArray[np.float64], upper: NDArray[np.float64]
               ) -> tuple[NDArray[np.intp], NDArray[np.intp], NDArray[np.intp], NDArray[np.float64]]:  # fmt: skip
@@ -212,11 +222,6 @@ class Sieve:
         """Bin of each (fractional) channel; 0 for what is out of view."""
         whole = (channel + 0.5).astype(np.int32)
         return self._bin[np.where((whole >= 1) & (whole < self._n_channels - 1), whole, 0)]
-
-
-def _unusual(offset_kev: NDArray[np.float64]) -> NDArray[np.float64]:
-    """What a large offset costs, in the sieve's unit."""
-    return np.asarray(2.0 * np.log1p((offset_kev / 0.1) ** 2))
 
 
 def _lines_by_series(patterns: Patterns) -> tuple[NDArray[np.float64], ...]:

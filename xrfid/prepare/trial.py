@@ -16,7 +16,7 @@ from scipy.optimize import nnls
 from xrfid.prepare.patterns import Patterns
 from xrfid.prepare.reduced import Reduced
 from xrfid.response.detector import DrawnLines, draw_core, joined
-from xrfid.spectrum import FWHM_PER_SIGMA, EnergyScale, Resolution
+from xrfid.spectrum import FWHM_PER_SIGMA, MN_KA_KEV, EnergyScale, Resolution
 
 ENTER = 25.0
 """Gain in squared misfit asked of a candidate; twice that of a rare element."""
@@ -24,6 +24,8 @@ COST = 14.0
 """What a candidate costs in the score: choosing it among 170 and its area."""
 OFFSET_COST = 8.0
 """A large offset is unusual: 6 at 0.1 keV, 37 at 1 keV (common practice, no source)."""
+WIDTH_COST = 25.0
+"""So is an unusual width: 25 for a factor of e."""
 _BEND = 16.0
 """Squared misfit of a bin from which it counts as a logarithm."""
 _DOPPLER_FANO = 0.0132
@@ -53,11 +55,12 @@ class Trial:
 class Bench:
     """Where scales are tried on one spectrum."""
 
-    def __init__(self, reduced: Reduced, patterns: Patterns, material: str, fano: float, pair_ev: float) -> None:
+    def __init__(self, reduced: Reduced, patterns: Patterns, material: str, fano: float, pair_ev: float,
+                 usual_fwhm_kev: float) -> None:  # fmt: skip
         self.reduced, self.patterns = reduced, patterns
         self.slope = FWHM_PER_SIGMA**2 * fano * pair_ev * 1e-3
         """Squared FWHM per keV that the Fano limit adds, keV."""
-        self._fano, self._pair = fano, pair_ev
+        self._usual = usual_fwhm_kev
         p = patterns
         sharp = np.array([k is not None or n == "source coherent" for k, n in zip(p.keys, p.names, strict=True)])
         on = sharp[p.of]
@@ -89,10 +92,17 @@ class Bench:
         rest = self._without_hats(r.net - model, variance)
         squared = rest * rest / variance
         score = float(np.sum(_BEND * np.log1p(squared / _BEND) + np.log(variance / r.variance)))
-        score += cost(self.patterns, chosen, scale)
+        score += self.cost(chosen, scale, noise)
         plain = self._without_hats(r.net, r.variance) ** 2 / r.variance
         explained = 1.0 - float(np.minimum(squared, plain).sum() / max(plain.sum(), 1e-9))
         return Trial(scale, noise, score, tuple(chosen), areas, explained, picked, float(areas[-1]), variance)
+
+    def cost(self, chosen: list[int], scale: EnergyScale, noise: float) -> float:
+        """What candidates, an unusual offset and an unusual width add to a score."""
+        fwhm = math.sqrt(max(noise + self.slope * MN_KA_KEV, 1e-4))
+        unusual = OFFSET_COST * math.log1p((scale.offset_kev / 0.1) ** 2)
+        unusual += WIDTH_COST * math.log(fwhm / self._usual) ** 2
+        return unusual + COST * len(chosen) + ENTER * float(self.patterns.rare[chosen].sum())
 
     def _drawn(self, lines: DrawnLines, noise: float, edges: NDArray[np.float64], wide: bool = False
                ) -> NDArray[np.float64]:  # fmt: skip
@@ -153,7 +163,7 @@ class Bench:
         limit = 0.5 * float(_width(trial.noise, self.slope).fwhm_kev(6.0))
         for _ in range(rounds):
             step = damped(self.step(best)[0], self._channels(best), limit)
-            noise = float(np.clip(best.noise + step[2], -0.35 * self.slope * 5.9, 0.35**2))
+            noise = float(np.clip(best.noise + step[2], -0.35 * self.slope * 5.9, 1.0))
             gain = best.scale.gain_kev + step[1]
             if gain <= 0:
                 break
@@ -197,12 +207,6 @@ def damped(step: NDArray[np.float64], channels: NDArray[np.float64], limit_kev: 
     """Shorten a step in (offset, gain, ...) so that no line at `channels` moves by more than `limit_kev`."""
     move = float(np.max(np.abs(step[0] + step[1] * channels), initial=0.0))
     return np.asarray(step * min(1.0, limit_kev / max(move, 1e-12)))
-
-
-def cost(patterns: Patterns, chosen: list[int], scale: EnergyScale) -> float:
-    """What candidates and an unusual offset add to a score."""
-    offset = OFFSET_COST * math.log1p((scale.offset_kev / 0.1) ** 2)
-    return offset + COST * len(chosen) + ENTER * float(patterns.rare[chosen].sum())
 
 
 def _width(noise: float, slope: float) -> Resolution:
