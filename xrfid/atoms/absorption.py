@@ -7,11 +7,11 @@ from collections.abc import Mapping
 from functools import lru_cache
 
 import numpy as np
-import xraylib
-import xraylib_np
 from numpy.typing import ArrayLike, NDArray
 
 from xrfid.atoms.elements import ATOMIC_NUMBER
+from xrfid.atoms.library import xraylib, xraylib_np
+from xrfid.atoms.lines import edge_energies
 from xrfid.errors import InputError
 
 ALL_Z = np.arange(1, 93, dtype=np.int64)
@@ -23,11 +23,42 @@ GAS_DENSITY_G_CM3 = {"air": 1.205e-3, "helium": 1.66e-4, "vacuum": 0.0}
 """At 20 degrees Celsius and 1013 hPa (handbook values)."""
 
 
+_LOWEST_KEV, _HIGHEST_KEV = 0.11, 700.0
+_PER_DECADE = 150
+# the library's absorption edges lie up to half a per cent off its edge energies: look closely around them
+_AROUND_EDGE = np.concatenate([np.linspace(-6e-3, 6e-3, 49), [-1e-2, 1e-2]])
+
+
+@lru_cache(maxsize=1)
+def _curves() -> tuple[tuple[NDArray[np.float64], NDArray[np.float64]], ...]:
+    """Logarithms of energy and attenuation of each element, with both sides of every edge.
+
+    Asked from the library once: between its points a log-log interpolation is good to 1e-4, and much
+    faster than asking again.
+    """
+    decades = np.log10(_HIGHEST_KEV / _LOWEST_KEV)
+    grid = np.geomspace(_LOWEST_KEV, _HIGHEST_KEV, int(decades * _PER_DECADE))
+    edges = edge_energies()
+    found = []
+    for z in ALL_Z:
+        own = edges[z][(edges[z] > _LOWEST_KEV * 1.01) & (edges[z] < _HIGHEST_KEV * 0.99)]
+        near = np.outer(own, 1.0 + _AROUND_EDGE).ravel()
+        energy = np.unique(np.concatenate([grid, near]))
+        total = xraylib_np.CS_Total(np.array([z], dtype=np.int64), energy)[0]
+        found.append((np.log(energy), np.log(total)))
+    return tuple(found)
+
+
+def _interpolated(z: int, log_energy: NDArray[np.float64]) -> NDArray[np.float64]:
+    known_energy, known = _curves()[z - 1]
+    return np.asarray(np.exp(np.interp(log_energy, known_energy, known)))
+
+
 def attenuation_table(energy_kev: ArrayLike) -> NDArray[np.float64]:
     """Mass attenuation of all elements.
 
     Photo-absorption plus coherent and incoherent scatter after Elam, Ravel & Sieber,
-    Radiat. Phys. Chem. 63 (2002) 121; 0.1 to 100 keV.
+    Radiat. Phys. Chem. 63 (2002) 121; 0.11 to 700 keV.
 
     Parameters
     ----------
@@ -39,18 +70,18 @@ def attenuation_table(energy_kev: ArrayLike) -> NDArray[np.float64]:
     ndarray, shape (92, n)
         cm2/g; row ``z - 1``.
     """
-    energy = np.ascontiguousarray(np.clip(np.atleast_1d(energy_kev), 0.11, 799.0), dtype=float)
-    table: NDArray[np.float64] = xraylib_np.CS_Total(ALL_Z, energy)
-    return table
+    log_energy = np.log(np.clip(np.atleast_1d(energy_kev), _LOWEST_KEV, _HIGHEST_KEV))
+    return np.array([_interpolated(int(z), log_energy) for z in ALL_Z])
 
 
 def mass_attenuation(composition: Mapping[int, float], energy_kev: ArrayLike) -> NDArray[np.float64]:
     """Mass attenuation, cm2/g, of a mixture {Z: mass fraction}, shape of `energy_kev`."""
     energy = np.atleast_1d(np.asarray(energy_kev, dtype=float))
-    z = np.array(list(composition), dtype=np.int64)
-    w = np.array(list(composition.values()), dtype=float)
-    table = xraylib_np.CS_Total(z, np.ascontiguousarray(np.clip(energy.ravel(), 0.11, 799.0)))
-    return np.asarray(w @ table).reshape(energy.shape)
+    log_energy = np.log(np.clip(energy, _LOWEST_KEV, _HIGHEST_KEV))
+    total = np.zeros(energy.shape)
+    for z, w in composition.items():
+        total += w * _interpolated(z, log_energy)
+    return total
 
 
 @lru_cache(maxsize=256)
@@ -126,3 +157,27 @@ def scatter_tables(
     coherent = xraylib_np.DCS_Rayl(ALL_Z, energy, theta)[:, :, 0]
     incoherent = xraylib_np.DCS_Compt(ALL_Z, energy, theta)[:, :, 0]
     return coherent, incoherent
+
+
+@lru_cache(maxsize=1)
+def _compton_profiles() -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Momenta (atomic units) and each element's Compton profile per electron system, shape (92, n)."""
+    momentum = np.concatenate([np.linspace(0.0, 10.0, 201), np.geomspace(10.3, 99.0, 60)])
+    return momentum, xraylib_np.ComptonProfile(ALL_Z, momentum)
+
+
+def compton_momentum_profile(fractions: NDArray[np.float64], momentum: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Compton profile per gram of a mixture, relative, at momenta in atomic units.
+
+    Biggs, Mendelsohn & Mann, At. Data Nucl. Data Tables 16 (1975) 201 (in xraylib).
+
+    Parameters
+    ----------
+    fractions : ndarray, shape (92,)
+        Mass fractions.
+    momentum : ndarray, shape (n,)
+        Projected electron momentum; its sign does not matter.
+    """
+    known, profiles = _compton_profiles()
+    moles = fractions / np.array([xraylib.AtomicWeight(int(z)) for z in ALL_Z])
+    return np.interp(np.abs(momentum), known, moles @ profiles, right=0.0)

@@ -3,10 +3,9 @@
 from __future__ import annotations
 
 import numpy as np
-import xraylib
-import xraylib_np
 from numpy.typing import NDArray
 
+from xrfid.atoms.library import xraylib, xraylib_np
 from xrfid.atoms.lines import SUBSHELLS, edge_energies
 
 # A line that every element with that sub-shell in reach has; production / its rate = the whole sub-shell.

@@ -27,11 +27,10 @@ from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
-import xraylib
-import xraylib_np
 from numpy.typing import NDArray
 
 from xrfid.atoms.elements import CANDIDATE_Z
+from xrfid.atoms.library import xraylib, xraylib_np
 
 SERIES = ("K", "L", "M")
 SUBSHELLS = ("K", "L1", "L2", "L3", "M1", "M2", "M3", "M4", "M5")

@@ -10,6 +10,7 @@ from xrfid.fit.model import Fit, Ingredients, fit_series
 from xrfid.fit.nuisance import Tolerances
 from xrfid.fit.refine import refined
 from xrfid.fit.setup import Setting, ingredients
+from xrfid.fit.threads import one_blas_thread
 from xrfid.identify.anode import AnodeInSample, anode_in_sample
 from xrfid.identify.assemble import assemble
 from xrfid.identify.challenge import exchange, unmask_peaks
@@ -50,7 +51,8 @@ def identify(spectrum: Spectrum, instrument: Instrument | None = None, settings:
     InputError
         If the instrument's description makes no sense.
     """
-    return assemble(search(spectrum, instrument or Instrument(), settings or Settings()))
+    with one_blas_thread():
+        return assemble(search(spectrum, instrument or Instrument(), settings or Settings()))
 
 
 def search(spectrum: Spectrum, instrument: Instrument, settings: Settings) -> Work:

@@ -240,7 +240,7 @@ def free_peaks(ingredients: Ingredients, fit: Fit, enter: float, most: int = 6) 
         for width in PEAK_WIDTHS:
             energy = _strongest_residual(residual, fit.variance, grouping, resolution, width)
             peak = FreePeak(energy, width, draw_peak(energy, width, resolution, grouping))
-            scored = score(fit, peak.column[None], ingredients.counts, np.maximum(fit.variance, 1.0))
+            scored = score(fit, peak.column[None], ingredients.counts, np.maximum(fit.variance, ingredients.counts))
             known = _on_a_known_line(ingredients, fit, peak, float(scored.amplitude[0]))
             if not known and (best is None or scored.z[0] > best[0]):
                 best = (float(scored.z[0]), peak)

@@ -13,12 +13,12 @@ from dataclasses import dataclass, field, replace
 from functools import lru_cache
 
 import numpy as np
-import xraylib
 from numpy.typing import NDArray
 from scipy.special import dawsn, erfcx, ndtr
 
 from xrfid.atoms.absorption import layer_transmission, mass_attenuation
 from xrfid.atoms.elements import ATOMIC_NUMBER
+from xrfid.atoms.library import xraylib
 from xrfid.instrument import Detector
 from xrfid.spectrum import Resolution
 
@@ -72,7 +72,7 @@ def escape_fraction(material: str, line: EscapeLine, energy_kev: NDArray[np.floa
     Reed & Ware, J. Phys. E 5 (1972) 582; 0 below the edge; shape of `energy_kev`.
     """
     energy = np.asarray(energy_kev, dtype=float)
-    mu_in = mass_attenuation(ELEMENTS[material], np.maximum(energy, line.edge_kev))
+    mu_in = mass_attenuation(ELEMENTS[material], np.maximum(energy, line.edge_kev * (1.0 + 1e-6)))
     mu_out = float(mass_attenuation(ELEMENTS[material], line.loss_kev)[0])
     z_share = line.mass_fraction
     if z_share < 1.0:  # only photons absorbed by this element of the compound can make its line

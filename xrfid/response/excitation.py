@@ -12,11 +12,11 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-import xraylib
 from numpy.typing import NDArray
 
 from xrfid.atoms.absorption import layer_transmission, mass_attenuation
 from xrfid.atoms.elements import ATOMIC_NUMBER
+from xrfid.atoms.library import xraylib
 from xrfid.atoms.lines import GROUPS, SUBSHELLS, edge_energies, line_table
 from xrfid.errors import InputError
 from xrfid.instrument import Instrument, Layer, Tube

@@ -1,7 +1,7 @@
 """What the sample scatters into the detector: the source's lines, coherently and incoherently, and its continuum.
 
-Compton, Phys. Rev. 21 (1923) 483 for the shift; Doppler width from the Compton profiles of Biggs,
-Mendelsohn & Mann, At. Data Nucl. Data Tables 16 (1975) 201 (in xraylib), impulse approximation.
+Compton, Phys. Rev. 21 (1923) 483 for the shift; Doppler width from Compton profiles in the impulse
+approximation.
 """
 
 from __future__ import annotations
@@ -10,10 +10,9 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-import xraylib_np
 from numpy.typing import NDArray
 
-from xrfid.atoms.absorption import ALL_Z, attenuation_table, scatter_tables
+from xrfid.atoms.absorption import attenuation_table, compton_momentum_profile, scatter_tables
 from xrfid.response.excitation import Excitation
 
 ELECTRON_REST_KEV = 510.999
@@ -65,20 +64,10 @@ def compton_profile(
     fractions: NDArray[np.float64], energy_kev: float, scatter_deg: float, at_kev: NDArray[np.float64]
 ) -> NDArray[np.float64]:
     """Doppler-broadened incoherent peak of a line of `energy_kev`, unit area per keV, at energies (n,)."""
-    present = np.flatnonzero(fractions > 1e-3)
-    moles = fractions[present] / np.array([_atomic_weight(int(z)) for z in ALL_Z[present]])
     cos = math.cos(math.radians(scatter_deg))
     e2 = np.maximum(at_kev, 1e-3)
     transfer = energy_kev - e2 - energy_kev * e2 * (1.0 - cos) / ELECTRON_REST_KEV
     momentum = _MOMENTUM_UNITS * transfer / np.sqrt(energy_kev**2 + e2**2 - 2.0 * energy_kev * e2 * cos)
-    grid = np.minimum(np.abs(momentum), 99.0)
-    profile = moles @ xraylib_np.ComptonProfile(ALL_Z[present], np.ascontiguousarray(grid))
-    profile = np.where(at_kev < energy_kev, profile, 0.0)
+    profile = np.where(at_kev < energy_kev, compton_momentum_profile(fractions, momentum), 0.0)
     area = float(np.sum(0.5 * (profile[1:] + profile[:-1]) * np.diff(at_kev)))
     return np.asarray(profile / area) if area > 0 else profile
-
-
-def _atomic_weight(z: int) -> float:
-    import xraylib
-
-    return float(xraylib.AtomicWeight(z))

@@ -19,7 +19,7 @@ from xrfid.instrument import Instrument
 from xrfid.response.detector import efficiency
 from xrfid.response.excitation import Excitation, excitation
 from xrfid.response.sample import LIGHT_MATRIX, Layer, enhancement, escape_depth, sines
-from xrfid.response.scatter import Scattered, ScatterModel
+from xrfid.response.scatter import Scattered, ScatterModel, compton_energy
 
 
 @dataclass(frozen=True, slots=True)
@@ -81,6 +81,7 @@ class Prediction:
             detector, self.line_energy_kev
         )
         self._scatter: ScatterModel | None = None
+        self._excited: tuple[tuple[int, ...], NDArray[np.float64]] | None = None
 
     def _keep_lines(self, table: LineTable, rows: NDArray[np.intp]) -> None:
         used = np.unique(table.series[rows])
@@ -137,16 +138,21 @@ class Prediction:
         out = np.zeros(rows.size)
         if not strong.size:
             return out
-        energy = self.line_energy_kev[strong]
         flux = (fractions[self.line_z[strong] - 1] * self.line_rate[strong])[:, None]
         flux = flux * self._emission[self._pair[strong]]
-        z = np.unique(self.line_z[rows])
-        emitted = subshell_emission(z, energy)
-        production = emitted[np.searchsorted(z, self.line_z[rows]), self._pair_subshell[self._pair[rows]]]
+        production = self._excited_by(tuple(map(int, strong)))[self._pair[rows]]
         excited = np.flatnonzero(production.any(axis=1))
         mu = fractions @ self._mu_line[:, strong]
         out[excited] = enhancement(production[excited], flux, a, mu, b[excited])
         return out
+
+    def _excited_by(self, lines: tuple[int, ...]) -> NDArray[np.float64]:
+        """Emission of every sub-shell when excited by the sample's own lines, shape (n_pairs, n_lines)."""
+        if self._excited is None or self._excited[0] != lines:
+            z = np.unique(self._pair_z)
+            emitted = subshell_emission(z, self.line_energy_kev[list(lines)])
+            self._excited = (lines, emitted[np.searchsorted(z, self._pair_z), self._pair_subshell])
+        return self._excited[1]
 
     def layered_intensities(self, coating: Layer, substrate: Layer | None) -> tuple[NDArray[np.float64], ...]:
         """Photons in each line from a coating and from the substrate below it (primary only).
@@ -172,12 +178,14 @@ class Prediction:
         """Photons of the source scattered by a thick sample and recorded; same unit as the lines."""
         if self._scatter is None:
             self._scatter = ScatterModel(self.source, self.instrument.geometry.scatter_deg, self._sines)
+            self._scatter_recorded = (
+                self.recorded(self.source.energy_kev),
+                self.recorded(compton_energy(self.source.energy_kev, self.instrument.geometry.scatter_deg)),
+            )
         raw = self._scatter(fractions)
+        coherent, incoherent = self._scatter_recorded
         return Scattered(
-            raw.coherent_kev,
-            raw.coherent * self.recorded(raw.coherent_kev),
-            raw.incoherent_kev,
-            raw.incoherent * self.recorded(raw.incoherent_kev),
+            raw.coherent_kev, raw.coherent * coherent, raw.incoherent_kev, raw.incoherent * incoherent
         )
 
     def recorded(self, energy_kev: NDArray[np.float64]) -> NDArray[np.float64]:
