@@ -34,12 +34,14 @@ def atomic_output(path: str | Path, *, overwrite: bool = False) -> Iterator[Path
         left behind and what was there before is untouched.
     """
     target = Path(path)
-    if target.is_dir():
-        raise OutputError(str(path), "is a folder", "name a file")
-    if target.exists() and not overwrite:
-        raise _exists(path)
     try:
+        if target.is_dir():
+            raise OutputError(str(path), "is a folder", "name a file")
+        if target.exists() and not overwrite:
+            raise _exists(path)
         handle, name = tempfile.mkstemp(prefix=f".{target.stem[:40]}.", suffix=target.suffix, dir=target.parent)
+    except OutputError:
+        raise
     except OSError as error:
         raise OutputError(str(path), _why(error), "name a file in a folder that exists and can be written") from None
     os.close(handle)

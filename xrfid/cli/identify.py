@@ -57,7 +57,8 @@ def command(inputs: tuple[Path, ...], instrument_path: Path | None, json_path: P
     worst, done = 0, []
     spectra, failed = _read_all(inputs, dataset, layout)
     worst = max((error.exit_status for error in failed), default=0)
-    outputs = _Outputs(json_path, page_path, figure_path, overwrite, several=len(spectra) > 1)
+    several = len(inputs) > 1 or len(spectra) > 1
+    outputs = _Outputs(json_path, page_path, figure_path, overwrite, several)
     outputs.check([s for s, _ in spectra])
     for spectrum, name in spectra:
         try:
