@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from xrfid.errors import Untrustworthy
 from xrfid.instrument import Instrument
 from xrfid.prepare.end_point import end_cost, stop_channel
-from xrfid.prepare.patterns import Patterns, patterns_of
+from xrfid.prepare.patterns import Patterns, only, patterns_of
 from xrfid.prepare.peaks import Peak, Widths, find_peaks
 from xrfid.prepare.polish import Polished, polish
 from xrfid.prepare.reduced import Reduced, reduce
@@ -66,7 +66,8 @@ class Found:
 class Search:
     """Peaks, bins and patterns of one spectrum, ready for scales to be tried on."""
 
-    def __init__(self, counts: NDArray[np.float64], instrument: Instrument, end_kev: float | None) -> None:
+    def __init__(self, counts: NDArray[np.float64], instrument: Instrument, end_kev: float | None,
+                 elements: frozenset[str] | None = None) -> None:  # fmt: skip
         self.peaks, self.widths = find_peaks(counts)
         self.real = [p for p in self.peaks if p.area > 0]
         self.detector = instrument.detector
@@ -79,6 +80,8 @@ class Search:
         self.reduced: Reduced = reduce(counts, self.widths)
         known = instrument.tube is not None and "anode" in instrument.tube.model_fields_set
         self.patterns: Patterns = patterns_of(instrument, end_kev, known)
+        if elements is not None:
+            self.patterns = only(self.patterns, elements)
         self.end_kev = end_kev
         self._stop, self._stops = stop_channel(counts)
         self.bench = Bench(self.reduced, self.patterns, material, self.fano, self.pair_ev, self.usual)

@@ -63,6 +63,19 @@ class Patterns:
     end_kev: float
 
 
+def only(patterns: Patterns, elements: frozenset[str]) -> Patterns:
+    """Return the candidates of some elements alone, scatter of the source included."""
+    keep = np.array([k is None or k.element in elements for k in patterns.keys])
+    new = np.cumsum(keep) - 1
+    lines = keep[patterns.of]
+    chosen = np.flatnonzero(keep)
+    return Patterns(
+        tuple(patterns.names[i] for i in chosen), tuple(patterns.keys[i] for i in chosen), np.zeros(chosen.size),
+        patterns.energy_kev[lines], patterns.share[lines], patterns.free[lines], patterns.extra_kev[lines],
+        new[patterns.of[lines]], patterns.group[lines], patterns.end_kev,
+    )  # fmt: skip
+
+
 def patterns_of(instrument: Instrument, end_kev: float | None, known_anode: bool) -> Patterns:
     """Return all candidates in reach.
 
@@ -105,13 +118,14 @@ def _series(instrument: Instrument, end: float) -> list[_Part]:
     path = instrument.path
     passed = gas_transmission(path.atmosphere, path.length_mm, table.energy_kev)
     made = made * passed * efficiency(instrument.detector, table.energy_kev)
+    order = np.argsort(table.series, kind="stable")
+    by_series = np.split(order, np.searchsorted(table.series[order], np.arange(1, len(table.series_keys))))
     tolerance = np.array([g.tolerance for g in GROUPS])
     # K-beta of an element whose K edge lies between it and K-alpha of another: 0.2 to 1.3 (Sherman's equation)
     latitude = np.where(tolerance > 0, np.maximum(tolerance, 0.25), 0.0)
     parts: list[_Part] = []
-    bounds = np.searchsorted(table.series, np.arange(len(table.series_keys) + 1)) if _sorted(table.series) else None
     for i, (z, letter) in enumerate(table.series_keys):
-        rows = np.arange(bounds[i], bounds[i + 1]) if bounds is not None else np.flatnonzero(table.series == i)
+        rows = by_series[i]
         total = float(made[rows].sum())
         if z < LOWEST_Z or total <= 0 or float(made[rows].max()) <= 0:
             continue
@@ -127,10 +141,6 @@ def _series(instrument: Instrument, end: float) -> list[_Part]:
         parts.append((str(key), key, rare, table.energy_kev[rows], share / share.sum(), latitude[table.group[rows]],
                       table.width_kev[rows], table.group[rows]))  # fmt: skip
     return parts
-
-
-def _sorted(values: NDArray[np.intp]) -> bool:
-    return bool(np.all(values[1:] >= values[:-1]))
 
 
 @lru_cache(maxsize=8)

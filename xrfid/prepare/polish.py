@@ -77,7 +77,7 @@ def polish(reduced: Reduced, patterns: Patterns, chosen: tuple[int, ...], shape:
     moving : bool
         False to leave offset and gain as they are: widths and residuals only.
     """
-    work = _Work(reduced, patterns, _with_companions(patterns, chosen), material)
+    work = LineWork(reduced, patterns, _with_companions(patterns, chosen), material)
     resolution = shape.resolution
     covariance = np.zeros((3, 3))
     for _ in range(_ROUNDS):
@@ -136,8 +136,8 @@ class _Solved:
     chi2: float
 
 
-class _Work:
-    """The chosen candidates' line groups."""
+class LineWork:
+    """The chosen candidates' line groups on one spectrum, ready to be solved for on any scale."""
 
     def __init__(self, reduced: Reduced, patterns: Patterns, chosen: tuple[int, ...], material: str) -> None:
         self.reduced, self.material = reduced, material
@@ -217,6 +217,29 @@ class _Work:
         chi2 = float(np.mean(np.minimum(rest**2 / variance, _BEND)))
         channels = r.centres[np.argmax(series, axis=1)]
         return _Solved(solution[:3], channels, inverse[:3, :3], residuals, chi2)
+
+    def misfit(self, scale: EnergyScale, shape: LineShape, robust: NDArray[np.float64] | None
+               ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:  # fmt: skip
+        """Weighted misfit of a scale with the best areas, and the weights to pass in as `robust` next time.
+
+        The areas are solved for inside, so that a search over scale and width sees these few alone. The last entries
+        are what the line-group shares have moved, in units of their latitude.
+        """
+        r = self.reduced
+        groups = self.columns(scale, shape)
+        owner = np.array(self.owner)
+        series = np.zeros((self._n, groups.shape[1]))
+        np.add.at(series, owner, groups)
+        loose = np.flatnonzero(np.array(self.latitude) > 0)
+        variance = np.maximum(r.counts, 1.0) + (SYSTEMATIC * np.maximum(self.net, 0.0)) ** 2
+        weight = 1.0 / np.sqrt(variance) if robust is None else robust
+        area = np.maximum(series @ (self.net / variance), 0.0) / np.maximum(np.sum(series**2 / variance, axis=1), 1e-30)
+        prior = np.array(self.latitude)[loose] * np.maximum(area[owner[loose]], 1e-6)
+        design = np.vstack([series, groups[loose], r.pile_column(scale.offset_kev / scale.gain_kev)[None], self.hats])
+        solution, _ = _ridge(design * weight, self.net * weight, self._n, prior)
+        rest = self.net - solution @ design
+        pulls = solution[self._n : self._n + loose.size] / prior
+        return np.concatenate([rest * weight, pulls]), 1.0 / np.sqrt(variance * (1.0 + rest**2 / variance / _BEND))
 
     def _moves(self, model: NDArray[np.float64], scale: EnergyScale) -> NDArray[np.float64]:
         """Derivatives of the model by offset, gain and squared noise, shape (3, n)."""
