@@ -46,18 +46,14 @@ class Cluster:
         try:
             from distributed import Client
         except ImportError:
-            raise InputError(
-                "--scheduler", "needs the package distributed", "pip install 'xrfid[cluster]'"
-            ) from None
+            raise InputError("--scheduler", "needs the package distributed", "pip install 'xrfid[cluster]'") from None
         try:
             connect: Any = Client
             self._client = connect(address, timeout=_CONNECT_S, set_as_default=False)
         except (OSError, ValueError) as error:
             raise InputError(f"scheduler {address}", f"does not answer ({error})", "is it running?") from None
         self._place = place
-        self.n = max(
-            sum(w["nthreads"] for w in self._client.scheduler_info(n_workers=-1)["workers"].values()), 1
-        )
+        self.n = max(sum(w["nthreads"] for w in self._client.scheduler_info(n_workers=-1)["workers"].values()), 1)
 
     def submit(self, part: Part, block: int, known: NDArray[np.float32]) -> Callable[[], BlockResult]:
         """Have a block fitted by some worker."""

@@ -18,10 +18,10 @@ from xrfid.batch.engine import GOOD, add_up
 from xrfid.batch.stack import Stack
 from xrfid.batch.work import Progress
 from xrfid.errors import InputError, Untrustworthy
-from xrfid.identify.pipeline import search
-from xrfid.identify.work import Work
 from xrfid.identify.assemble import assemble
+from xrfid.identify.pipeline import search
 from xrfid.identify.settings import Settings
+from xrfid.identify.work import Work
 from xrfid.instrument import Instrument
 from xrfid.response.series import SeriesKey
 from xrfid.spectrum import Spectrum
@@ -36,7 +36,7 @@ _REACH_FWHM = 1.0
 
 @dataclass(frozen=True, slots=True)
 class Hidden:
-    """An element that the sum does not show: its series, and the points (indices among all) it was found in."""
+    """An element that the sum does not show: its series, and the points (of all) it was found in."""
 
     element: str
     series: tuple[SeriesKey, ...]
@@ -52,9 +52,7 @@ def sampled_blocks(stack: Stack) -> NDArray[np.int64]:
     return np.unique(np.linspace(0, stack.n_blocks - 1, wanted).round().astype(np.int64))
 
 
-def sample_sum(
-    stack: Stack, blocks: NDArray[np.int64], progress: Progress
-) -> tuple[NDArray[np.float64], int]:
+def sample_sum(stack: Stack, blocks: NDArray[np.int64], progress: Progress) -> tuple[NDArray[np.float64], int]:
     """Add up the good spectra of some blocks; return the sum, shape (n_channels,), and how many they are.
 
     Raises
@@ -69,17 +67,13 @@ def sample_sum(
         summed, n = summed + part, n + good
         progress("looking at a sample", i + 1, len(blocks))
     if not summed.any():
-        raise InputError(
-            f"{stack.place.path}:{stack.names[0]}", "holds no counts that can be used", "is this the run?"
-        )
+        raise InputError(f"{stack.place.path}:{stack.names[0]}", "holds no counts that can be used", "is this the run?")
     return summed, n
 
 
 def sum_spectrum(stack: Stack, summed: NDArray[np.float64], title: str) -> Spectrum:
     """Turn a sum of points into a spectrum of this run."""
-    return Spectrum(
-        counts=summed, scale=stack.scale, title=title, path=stack.place.path, dataset=",".join(stack.names)
-    )
+    return Spectrum(counts=summed, scale=stack.scale, title=title, path=stack.place.path, dataset=",".join(stack.names))
 
 
 def restricted(settings: Settings, elements: tuple[str, ...]) -> Settings:
@@ -147,9 +141,7 @@ def hidden_elements(
         Series that are fitted already.
     """
     groups = list(_groups(judged, np.unique(holders[holders >= 0]), work))
-    stricter = replace(
-        settings, false_identification_level=settings.false_identification_level / max(len(groups), 1)
-    )
+    stricter = replace(settings, false_identification_level=settings.false_identification_level / max(len(groups), 1))
     found: dict[str, Hidden] = {}
     for i, (where, points) in enumerate(groups):
         progress("looking at points that stand out", i, len(groups))
@@ -165,9 +157,7 @@ def hidden_elements(
     return list(found.values())
 
 
-def _groups(
-    judged: Judgement, holders: NDArray[np.int64], work: Work
-) -> Iterator[tuple[str, NDArray[np.int64]]]:
+def _groups(judged: Judgement, holders: NDArray[np.int64], work: Work) -> Iterator[tuple[str, NDArray[np.int64]]]:
     """Points that stand out together: by the energy of their excess, then those that hold maxima."""
     left = judged.deviating()
     for _ in range(_MOST_CLUSTERS):

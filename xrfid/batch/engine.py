@@ -108,9 +108,7 @@ def fit_block(
     return result
 
 
-def add_up(
-    layers: list[NDArray[Any]], lost: NDArray[np.bool_], signed: bool
-) -> tuple[NDArray[np.float64], int]:
+def add_up(layers: list[NDArray[Any]], lost: NDArray[np.bool_], signed: bool) -> tuple[NDArray[np.float64], int]:
     """Sum of a block's good spectra, shape (n_channels,), and their number."""
     status = np.where(lost, UNREADABLE, GOOD).astype(np.uint8)
     buffer = np.zeros((_ROWS, layers[0].shape[1]), np.float32)
@@ -168,9 +166,7 @@ def _accumulate(y: NDArray[np.float32], rows: slice, result: BlockResult) -> Non
     result.holder[raised] = rows.start + np.argmax(inner[:, raised], axis=0)
 
 
-def _fit_rows(
-    plan: Plan, y: NDArray[np.float32], bands: NDArray[np.float32], rows: slice, result: BlockResult
-) -> None:
+def _fit_rows(plan: Plan, y: NDArray[np.float32], bands: NDArray[np.float32], rows: slice, result: BlockResult) -> None:
     """Areas, uncertainties and goodness of fit of some spectra."""
     coefficients = y @ plan.projection
     area = coefficients[:, : plan.n_series]
@@ -183,9 +179,7 @@ def _fit_rows(
     _judge(plan, coefficients, bands, rows, result)
 
 
-def _variances(
-    plan: Plan, coefficients: NDArray[np.float32], counts: NDArray[np.float32]
-) -> NDArray[np.float32]:
+def _variances(plan: Plan, coefficients: NDArray[np.float32], counts: NDArray[np.float32]) -> NDArray[np.float32]:
     """Poisson variances of the areas, shape (n, n_series), from counts per point, shape (n, 1).
 
     The point's own expectation and that of the mean spectrum's shape are averaged with the weights of

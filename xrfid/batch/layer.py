@@ -21,13 +21,14 @@ Box = tuple[slice, ...]
 Unpack = Callable[[bytes, int], bytes]
 
 
-def _inflate() -> Unpack:
-    """Return the quickest deflate decoder installed (the extra `speed` brings one twice as quick)."""
+def _inflater() -> tuple[Unpack, type[Exception]]:
+    """Return the quickest deflate decoder installed, and its error; the extra `speed` brings one twice as quick."""
     try:
-        from isal import isal_zlib
+        from isal import igzip_lib, isal_zlib
     except ImportError:
-        return lambda packed, size: zlib.decompress(packed, bufsize=size)
-    return cast("Unpack", lambda packed, size: isal_zlib.decompress(packed, bufsize=size))
+        return lambda packed, size: zlib.decompress(packed, bufsize=size), zlib.error
+    error = cast("type[Exception]", igzip_lib.IsalError)
+    return lambda packed, size: isal_zlib.decompress(packed, bufsize=size), error
 
 
 _DEFLATE, _SHUFFLE = h5py.h5z.FILTER_DEFLATE, h5py.h5z.FILTER_SHUFFLE
@@ -43,22 +44,21 @@ class Layer:
         File descriptor of the same file, for reading past the library; -1 if that cannot be done.
     detector : int, optional
         Index on the first axis.
+    ends_at : int, optional
+        Bytes that the file really has, if it was cut off.
     """
 
-    def __init__(self, dataset: h5py.Dataset, handle: int, detector: int | None = None) -> None:
-        self._dataset, self._handle = dataset, handle
+    def __init__(
+        self, dataset: h5py.Dataset, handle: int, detector: int | None = None, ends_at: int | None = None
+    ) -> None:
+        self._dataset, self._handle, self._ends_at = dataset, handle, ends_at
         self._prefix: Box = () if detector is None else (slice(detector, detector + 1),)
         own = len(self._prefix)
         self.shape: tuple[int, ...] = dataset.shape[own:]
         self.dtype = np.dtype(dataset.dtype)
         self.chunks: tuple[int, ...] | None = None if dataset.chunks is None else dataset.chunks[own:]
-        self._inflate = _inflate()
-        plain = (
-            handle >= 0
-            and not dataset.is_virtual
-            and not dataset.external
-            and dataset.file.userblock_size == 0
-        )
+        self._inflate, self._inflate_error = _inflater()
+        plain = handle >= 0 and not dataset.is_virtual and not dataset.external and dataset.file.userblock_size == 0
         self._offset = dataset.id.get_offset() if plain and dataset.chunks is None else None
         self._filters = _filters(dataset) if plain and dataset.chunks is not None else None
 
@@ -108,9 +108,7 @@ class Layer:
         flags = lost.reshape(-1)
         per_piece = int(np.prod(extent[cut:-1], dtype=np.int64))
         for piece, lead in enumerate(np.ndindex(*extent[:cut])):
-            at = [whole[a].start + lead[a] for a in range(cut)] + [
-                whole[a].start for a in range(cut, len(full))
-            ]
+            at = [whole[a].start + lead[a] for a in range(cut)] + [whole[a].start for a in range(cut, len(full))]
             offset = self._offset + int(np.dot(at, strides)) * self.dtype.itemsize
             target = rows[piece * per_piece : (piece + 1) * per_piece]
             got = _read_into(self._handle, target, offset)
@@ -124,9 +122,7 @@ class Layer:
         for corner, inside, target in _overlaps(whole, self._dataset.chunks, self._dataset.shape):
             try:
                 chunk = self._chunk(corner)
-            except (OSError, zlib.error, ValueError, EOFError) as error:
-                if not _damaged(error):
-                    raise
+            except (OSError, RuntimeError, self._inflate_error, ValueError, EOFError):
                 counts[target], lost[target[:-1]] = 0, True
                 continue
             counts[target] = self._dataset.fillvalue if chunk is None else chunk[inside]
@@ -145,9 +141,7 @@ class Layer:
             if info.filter_mask & (1 << position):
                 continue
             packed = (
-                self._inflate(packed, size)
-                if self._filters[position] == _DEFLATE
-                else _unshuffled(packed, self.dtype)
+                self._inflate(packed, size) if self._filters[position] == _DEFLATE else _unshuffled(packed, self.dtype)
             )
         return np.frombuffer(packed, self.dtype).reshape(shape)
 
@@ -155,20 +149,28 @@ class Layer:
         """Let the HDF5 library read; where it fails, chunk by chunk, so that only bad chunks are lost."""
         counts = np.zeros(extent, self.dtype)
         try:
-            self._dataset.read_direct(counts, whole)
-            return counts
+            if self._ends_at is None:
+                self._dataset.read_direct(counts, whole)
+                return counts
         except OSError:
             counts[...] = 0
         pieces = self._dataset.chunks or (1,) * (len(extent) - 1) + extent[-1:]
-        for _, _, target in _overlaps(whole, pieces, self._dataset.shape):
-            where = tuple(
-                slice(w.start + t.start, w.start + t.stop) for w, t in zip(whole, target, strict=True)
-            )
+        for corner, _, target in _overlaps(whole, pieces, self._dataset.shape):
+            where = tuple(slice(w.start + t.start, w.start + t.stop) for w, t in zip(whole, target, strict=True))
             try:
+                if self._is_cut_off(corner):
+                    raise EOFError("the file ends before or inside this chunk")
                 counts[target] = self._dataset[where]
-            except OSError:
+            except (OSError, RuntimeError, EOFError):
                 lost[target[:-1]] = True
         return counts
+
+    def _is_cut_off(self, corner: tuple[int, ...]) -> bool:
+        """Whether a chunk lies beyond the end of a truncated file, where zeros would be read."""
+        if self._ends_at is None or self._dataset.chunks is None:
+            return False
+        info = self._dataset.id.get_chunk_info_by_coord(corner)
+        return info.byte_offset is not None and info.byte_offset + info.size > self._ends_at
 
 
 def _filters(dataset: h5py.Dataset) -> tuple[int, ...] | None:
@@ -176,11 +178,6 @@ def _filters(dataset: h5py.Dataset) -> tuple[int, ...] | None:
     plist = dataset.id.get_create_plist()
     codes = tuple(plist.get_filter(i)[0] for i in range(plist.get_nfilters()))
     return codes if set(codes) <= {_DEFLATE, _SHUFFLE} else None
-
-
-def _damaged(error: Exception) -> bool:
-    """Whether an error speaks of the bytes of one chunk, not of a file that went away."""
-    return not isinstance(error, OSError) or error.errno is None or error.errno == 5
 
 
 def _unshuffled(packed: bytes, dtype: np.dtype[Any]) -> bytes:

@@ -125,9 +125,7 @@ def _stacks(file: h5py.File) -> list[str]:
 
 
 def _is_stack(item: h5py.Dataset) -> bool:
-    return (
-        item.dtype.kind in "iuf" and item.ndim >= 2 and item.shape[-1] >= _FEWEST_CHANNELS and item.size > 0
-    )
+    return item.dtype.kind in "iuf" and item.ndim >= 2 and item.shape[-1] >= _FEWEST_CHANNELS and item.size > 0
 
 
 def _is_signal(item: h5py.Dataset) -> bool:
@@ -176,8 +174,4 @@ def _text(value: Any) -> str:
     """Turn what HDF5 attributes hold into text."""
     if isinstance(value, np.ndarray) and value.size == 1:
         value = value.reshape(-1)[0]
-    return (
-        value.decode("utf-8", "replace")
-        if isinstance(value, bytes)
-        else str(value if value is not None else "")
-    )
+    return value.decode("utf-8", "replace") if isinstance(value, bytes) else str(value if value is not None else "")

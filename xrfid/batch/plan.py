@@ -98,9 +98,7 @@ class Plan:
     def projection(self) -> NDArray[np.float32]:
         """Coefficients from channels, shape (n_padded, n_columns): the grouping folded in."""
         out = np.zeros((self.n_padded, self.columns.shape[0]), dtype=np.float32)
-        out[self.starts[0] : self.starts[-1]] = np.repeat(
-            self.grouped_projection, np.diff(self.starts), axis=1
-        ).T
+        out[self.starts[0] : self.starts[-1]] = np.repeat(self.grouped_projection, np.diff(self.starts), axis=1).T
         return out
 
     @cached_property
@@ -186,9 +184,7 @@ def moved_lines(
     from scipy.interpolate import CubicSpline
 
     cumulative = CubicSpline(edges_kev, np.concatenate([[0.0], np.cumsum(column)]))
-    source = np.clip(
-        edges_kev - offset_kev - gain * (edges_kev - GAIN_PIVOT_KEV), edges_kev[0], edges_kev[-1]
-    )
+    source = np.clip(edges_kev - offset_kev - gain * (edges_kev - GAIN_PIVOT_KEV), edges_kev[0], edges_kev[-1])
     return np.diff(cumulative(source))
 
 
@@ -234,11 +230,7 @@ def _series_columns(drawn: Ingredients, fit: Fit) -> NDArray[np.float64]:
     for i, key in enumerate(fit.keys):
         column, area = x[i], 1.0
         if fit.areas[key] > _SOLID * fit.sigmas[key]:
-            own = [
-                j
-                for j, label in enumerate(fit.labels)
-                if label[0] in ("share", "shift") and label[1] == str(key)
-            ]
+            own = [j for j, label in enumerate(fit.labels) if label[0] in ("share", "shift") and label[1] == str(key)]
             column = (solution[i] * x[i] + solution[own] @ x[own]) / fit.areas[key]
         shared = shared_nuisances(drawn.columns, {key: area}, [], drawn.tolerances)
         out.append(column + sum(fit.coefficient(*n.label) * n.column for n in shared))
@@ -256,18 +248,14 @@ def _continuum_columns(drawn: Ingredients, fit: Fit) -> NDArray[np.float64]:
     return np.asarray(hats * shape)
 
 
-def _other_columns(
-    fit: Fit, series: NDArray[np.float64], continuum: NDArray[np.float64]
-) -> NDArray[np.float64]:
+def _other_columns(fit: Fit, series: NDArray[np.float64], continuum: NDArray[np.float64]) -> NDArray[np.float64]:
     """Scatter of each kind, pile-up and unassigned peaks as the sum shows them; in counts of the sum.
 
     What the tolerances of the scattered lines add goes with the strongest of the scatter columns.
     """
     parts = {name: fit.part(name) for name in ("sum", "partial")}
     peaks = [
-        fit.coefficient(*label) * fit.problem.columns[i]
-        for i, label in enumerate(fit.labels)
-        if label[0] == "peak"
+        fit.coefficient(*label) * fit.problem.columns[i] for i, label in enumerate(fit.labels) if label[0] == "peak"
     ]
     areas = np.array([fit.areas[k] for k in fit.keys])
     named = areas @ series + continuum + sum(parts.values()) + sum(peaks, np.zeros_like(continuum))

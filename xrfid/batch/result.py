@@ -160,9 +160,7 @@ def _fit(source: h5py.Group, entry: h5py.Group, finished: Finished, options: dic
     group["done"].attrs["long_name"] = "1 for each block of points that is fitted"
     group["drift"] = source["drift"][()]
     group["drift"].attrs["columns"] = list(DRIFT_FIELDS)
-    group["drift"].attrs["long_name"] = (
-        "shift of each block's lines at 6 keV and per keV of distance from there"
-    )
+    group["drift"].attrs["long_name"] = "shift of each block's lines at 6 keV and per keV of distance from there"
     refits = _group(group, "refitted", "NXcollection", badly_fitted_points=finished.refits.listed)
     refits["index"] = np.stack(np.unravel_index(finished.refits.points, finished.shape), axis=-1)
     refits["reduced_chi2_before"] = finished.refits.before
@@ -170,9 +168,7 @@ def _fit(source: h5py.Group, entry: h5py.Group, finished: Finished, options: dic
 
 
 def _sum(entry: h5py.Group, finished: Finished) -> None:
-    group = _group(
-        entry, "sum_spectrum", "NXdata", signal="counts", axes="energy", auxiliary_signals=["maximum"]
-    )
+    group = _group(entry, "sum_spectrum", "NXdata", signal="counts", axes="energy", auxiliary_signals=["maximum"])
     group["counts"], group["maximum"] = finished.sums.summed, np.maximum(finished.sums.highest, 0.0)
     group["energy"] = finished.scale.energy_kev(np.arange(finished.sums.summed.size))
     for name, units in (("counts", "counts"), ("maximum", "counts"), ("energy", "keV")):
@@ -185,9 +181,7 @@ def _tables(entry: h5py.Group, finished: Finished, strongest: tuple[Strongest, .
     text = h5py.string_dtype()
     table = _group(entry, "strongest", "NXcollection")
     table.create_dataset("series", data=[s.series for s in strongest], dtype=text)
-    table["index"] = np.array([s.index for s in strongest], np.int64).reshape(
-        len(strongest), len(finished.shape)
-    )
+    table["index"] = np.array([s.index for s in strongest], np.int64).reshape(len(strongest), len(finished.shape))
     table["area"], table["sigma"] = [s.area for s in strongest], [s.sigma for s in strongest]
     hidden = _group(entry, "hidden", "NXcollection", long_name="elements that the sum does not show")
     hidden.create_dataset(

@@ -30,11 +30,11 @@ from xrfid.batch.stack import Place, Stack
 from xrfid.batch.store import DRIFT_FIELDS, Part, create_part
 from xrfid.batch.work import Progress, Threads, Workers, fit_blocks
 from xrfid.errors import InputError, OutputError
-from xrfid.identify.pipeline import search
-from xrfid.identify.work import Work
 from xrfid.identify.assemble import assemble, provenance
+from xrfid.identify.pipeline import search
 from xrfid.identify.result import Identification
 from xrfid.identify.settings import Settings
+from xrfid.identify.work import Work
 from xrfid.instrument import Instrument
 from xrfid.response.series import SeriesKey
 
@@ -192,9 +192,7 @@ class _Job:
         if not self.out.parent.is_dir():
             raise OutputError(str(self.out), "its folder does not exist", "make the folder first")
 
-    def run(
-        self, team: Workers, document: Callable[[Identification], str], compress: bool, overwrite: bool
-    ) -> Summary:
+    def run(self, team: Workers, document: Callable[[Identification], str], compress: bool, overwrite: bool) -> Summary:
         """Do everything that is not done yet."""
         part = self._begun(overwrite) or self._begin()
         resumed_at = part.sums.count
@@ -214,12 +212,7 @@ class _Job:
         """Return the unfinished result of an earlier call, if it is of the same input and settings."""
         if not self.part_path.exists():
             return None
-        try:
-            part = Part(self.part_path)
-        except (KeyError, ValueError) as error:
-            raise OutputError(
-                str(self.part_path), f"is no unfinished result ({error})", "remove it"
-            ) from None
+        part = Part(self.part_path)
         wanted = _plain(self.header)
         other = [key for key in wanted if part.header.get(key) != wanted[key]]
         if not other:
@@ -246,9 +239,7 @@ class _Job:
         """Search a sum of points; that of a small run is the same before and after, and searched once."""
         if self._searched is None or not np.array_equal(self._searched.spectrum.counts, summed):
             self.progress("identifying", 0, 1)
-            self._searched = search(
-                sum_spectrum(self.stack, summed, "sum of points"), self.instrument, self.settings
-            )
+            self._searched = search(sum_spectrum(self.stack, summed, "sum of points"), self.instrument, self.settings)
         return self._searched
 
     def _second_look(self, part: Part, work: Work) -> Part:

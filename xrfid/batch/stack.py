@@ -66,13 +66,24 @@ class Stack:
         self.place, path = place, Path(place.path)
         self._file, self.truncated = open_input(path)
         self._handle = os.open(path, os.O_RDONLY)
-        self.names = find_datasets(self._file, path, place.dataset)
+        self._ends_at = os.fstat(self._handle).st_size if self.truncated else None
+        try:
+            self._open(path)
+        except BaseException:
+            self.close()
+            raise
+
+    def _open(self, path: Path) -> None:
+        """Find the datasets and decide how the points are cut into blocks."""
+        try:
+            self.names = find_datasets(self._file, path, self.place.dataset)
+        except (RuntimeError, OSError) as error:
+            raise InputError(str(path), f"is damaged ({error})", "copy the file again") from None
         datasets = [self._file[name] for name in self.names]
         shapes = {d.shape for d in datasets}
         if len(shapes) > 1:
-            raise InputError(
-                str(path), f"the datasets to sum differ in shape: {sorted(shapes)}", "choose equal ones"
-            )
+            found = ", ".join(map(str, sorted(shapes)))
+            raise InputError(str(path), f"the datasets to sum differ in shape: {found}", "choose equal ones")
         self._layers = [layer for d in datasets for layer in self._split(d)]
         first = self._layers[0]
         self.shape, self.n_channels = first.shape[:-1], first.shape[-1]
@@ -86,19 +97,15 @@ class Stack:
         """Return a dataset as one layer, or as one for each detector asked for."""
         wanted = self.place.detectors
         if not wanted:
-            return [Layer(dataset, self._handle)]
+            return [Layer(dataset, self._handle, None, self._ends_at)]
         source = f"{self.place.path}:{dataset.name}"
         if dataset.ndim < 3:
-            raise InputError(
-                source, f"has no axis of detectors (shape {dataset.shape})", "leave the detectors out"
-            )
+            raise InputError(source, f"has no axis of detectors (shape {dataset.shape})", "leave the detectors out")
         chosen = tuple(range(dataset.shape[0])) if isinstance(wanted, str) else wanted
         beyond = [i for i in chosen if not 0 <= i < dataset.shape[0]]
         if beyond:
-            raise InputError(
-                source, f"has no detector {beyond[0]}", f"choose from 0 to {dataset.shape[0] - 1}"
-            )
-        return [Layer(dataset, self._handle, i) for i in chosen]
+            raise InputError(source, f"has no detector {beyond[0]}", f"choose from 0 to {dataset.shape[0] - 1}")
+        return [Layer(dataset, self._handle, i, self._ends_at) for i in chosen]
 
     def __enter__(self) -> Stack:
         return self
@@ -130,8 +137,7 @@ class Stack:
         """Return the points of a block as one slice per axis."""
         place = np.unravel_index(block, self._grid)
         return tuple(
-            slice(int(p) * e, min((int(p) + 1) * e, n))
-            for p, e, n in zip(place, self._extent, self.shape, strict=True)
+            slice(int(p) * e, min((int(p) + 1) * e, n)) for p, e, n in zip(place, self._extent, self.shape, strict=True)
         )
 
     def runs(self, block: int) -> Iterator[tuple[int, int, int]]:
@@ -194,9 +200,7 @@ def runs(box: Box, shape: tuple[int, ...]) -> Iterator[tuple[int, int, int]]:
         yield piece * length, int(np.ravel_multi_index(corner, shape)), length
 
 
-def _extent(
-    shape: tuple[int, ...], chunks: tuple[int, ...] | None, n_channels: int, itemsize: int
-) -> tuple[int, ...]:
+def _extent(shape: tuple[int, ...], chunks: tuple[int, ...] | None, n_channels: int, itemsize: int) -> tuple[int, ...]:
     """Points per block along each axis: whole chunks, about `BLOCK_BYTES`, last axes filled first."""
     step = [min(c, n) for c, n in zip(chunks or (1,) * (len(shape) + 1), shape, strict=False)]
     most = max(_MOST_BYTES // (n_channels * max(itemsize, 4)), 1)

@@ -43,9 +43,7 @@ class Sums:
     @classmethod
     def nothing(cls, n_channels: int) -> Sums:
         """Start from no block."""
-        return cls(
-            0, np.zeros(n_channels), np.full(n_channels, -1.0, np.float32), np.full(n_channels, -1, np.int64)
-        )
+        return cls(0, np.zeros(n_channels), np.full(n_channels, -1.0, np.float32), np.full(n_channels, -1, np.int64))
 
     def add(self, result: BlockResult, points: NDArray[np.int64]) -> None:
         """Add the next block, whose points have the indices `points`."""
@@ -57,12 +55,7 @@ class Sums:
 
     def packed(self) -> bytes:
         """Return a slot's bytes: checksum, count, arrays."""
-        body = (
-            self.count.to_bytes(8, "little")
-            + self.summed.tobytes()
-            + self.highest.tobytes()
-            + self.holder.tobytes()
-        )
+        body = self.count.to_bytes(8, "little") + self.summed.tobytes() + self.highest.tobytes() + self.holder.tobytes()
         return zlib.crc32(body).to_bytes(8, "little") + body
 
     @classmethod
@@ -98,17 +91,21 @@ class Part:
         self._handle = os.open(path, os.O_RDWR)
         try:
             fcntl.flock(self._handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
-        except OSError:
-            os.close(self._handle)
-            raise OutputError(
-                str(path), "another run is writing it", "wait for it, or choose another name"
-            ) from None
-        with h5py.File(path, "r", locking=False) as file:
+            self._read()
+        except BlockingIOError:
+            self.close()
+            raise OutputError(str(path), "another run is writing it", "wait, or choose another name") from None
+        except (KeyError, ValueError, OSError) as error:
+            self.close()
+            raise OutputError(str(path), f"is no unfinished result ({error})", "remove or rename it") from None
+
+    def _read(self) -> None:
+        """Take up what is there: header, plan, where the arrays lie, and how far the work had come."""
+        with h5py.File(self.path, "r", locking=False) as file:
             self.header: dict[str, Any] = json.loads(file.attrs["header"])
             self.plan = _read_plan(file)
             self._offsets = {name: file[name].id.get_offset() for name in _arrays(file)}
-            self._flags = self._offsets["entry/fit/done"]
-            self._slots = self._offsets["state"]
+        self._flags, self._slots = self._offsets["entry/fit/done"], self._offsets["state"]
         n = self.plan.n_channels
         size = _slot_size(n)
         stored = [Sums.unpacked(os.pread(self._handle, size, self._slots + i * size), n) for i in (0, 1)]
@@ -171,9 +168,7 @@ class Part:
             raise _cannot_write(self.path, error) from None
 
 
-def create_part(
-    path: Path, header: dict[str, Any], plan: Plan, shape: tuple[int, ...], n_blocks: int
-) -> Part:
+def create_part(path: Path, header: dict[str, Any], plan: Plan, shape: tuple[int, ...], n_blocks: int) -> Part:
     """Lay out an unfinished result; it appears whole, replacing one that is there."""
     new = path.with_name(path.name + ".new")
     try:
@@ -212,9 +207,7 @@ def _room(file: h5py.File, name: str, shape: tuple[int, ...], dtype: Any) -> Non
     layout.set_fill_time(h5py.h5d.FILL_TIME_NEVER)
     group, _, last = name.rpartition("/")
     where = file.require_group(group) if group else file
-    h5py.h5d.create(
-        where.id, last.encode(), h5py.h5t.py_create(np.dtype(dtype)), h5py.h5s.create_simple(shape), layout
-    )
+    h5py.h5d.create(where.id, last.encode(), h5py.h5t.py_create(np.dtype(dtype)), h5py.h5s.create_simple(shape), layout)
 
 
 def _arrays(file: h5py.File) -> list[str]:

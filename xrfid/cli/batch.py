@@ -27,9 +27,7 @@ _MOST_MAPS = 24
 
 @click.command()
 @click.argument("source", type=click.Path(path_type=Path), metavar="INPUT.h5")
-@click.option(
-    "--out", required=True, type=click.Path(path_type=Path), metavar="RESULT.h5", help="The result file."
-)
+@click.option("--out", required=True, type=click.Path(path_type=Path), metavar="RESULT.h5", help="The result file.")
 @instrument_option
 @dataset_option
 @click.option(
@@ -37,14 +35,10 @@ _MOST_MAPS = 24
     metavar="all|0,2,...",
     help="The first axis counts detectors: sum these (default: it counts points).",
 )
-@click.option(
-    "--elements", metavar="Fe,Cu,...", help="Fit exactly these elements (default: found in the run)."
-)
+@click.option("--elements", metavar="Fe,Cu,...", help="Fit exactly these elements (default: found in the run).")
 @click.option("--workers", type=click.IntRange(min=1), help="Threads (default: all cores).")
 @click.option("--scheduler", metavar="ADDRESS", help="Let the workers of a Dask scheduler do it.")
-@click.option(
-    "--maps", type=click.Path(path_type=Path), metavar="PATH", help="Draw all maps (.png, .svg or .pdf)."
-)
+@click.option("--maps", type=click.Path(path_type=Path), metavar="PATH", help="Draw all maps (.png, .svg or .pdf).")
 @click.option("--compress", is_flag=True, help="Compress the result.")
 @overwrite_option
 def command(source: Path, out: Path, instrument_path: Path | None, dataset: str | None, detectors: str | None,
@@ -125,9 +119,7 @@ def _say(summary: Summary, out: Path, console: object) -> None:
     for hidden in summary.hidden:
         console.print(f"{hidden.element} is not in the sum but in {hidden.where}")
     if abs(summary.drift_ev) > 2.0:
-        console.print(
-            f"the energy scale drifted by up to {summary.drift_ev:.1f} eV; corrected block by block"
-        )
+        console.print(f"the energy scale drifted by up to {summary.drift_ev:.1f} eV; corrected block by block")
     if summary.badly_fitted:
         console.print(f"{summary.badly_fitted} points fit badly; the worst were fitted singly")
     for what, count in summary.bad_points.items():

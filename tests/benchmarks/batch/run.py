@@ -10,6 +10,7 @@ of several counts, the page cache is warm.
 from __future__ import annotations
 
 import argparse
+import contextlib
 import sys
 import tempfile
 import time
@@ -85,10 +86,8 @@ def plan_of(source: Path, folder: Path) -> Plan:
             raise Caught
 
     out = folder / "caught.h5"
-    try:
+    with contextlib.suppress(Caught):
         run(source, out, document=to_json, instrument=simulated.INSTRUMENT, overwrite=True, progress=stop)
-    except Caught:
-        pass
     part = Part(out.with_name("caught.h5.part"))
     part.close()
     return part.plan
@@ -131,13 +130,15 @@ PLAN: list[Plan] = []
 
 
 def nnls_seconds(source: Path, plan: Plan, n: int = 300) -> float:
-    """Seconds per spectrum of scipy's non-negative least squares with the same columns and weights."""
+    """Seconds per spectrum of scipy's non-negative least squares with the same columns, channel by channel."""
     from scipy.optimize import nnls
 
+    first, last = int(plan.starts[0]), int(plan.starts[-1])
     with h5py.File(source) as file:
-        counts = plan.grouping.sum(file["entry/data/counts"][:n].astype(float))
-    weight = np.sqrt(plan.mean)
-    columns = np.ascontiguousarray((plan.columns / weight).T)
+        counts = file["entry/data/counts"][:n, first:last].astype(float)
+    spread = np.array([plan.grouping.spread(c, CHANNELS)[first:last] for c in (*plan.columns, plan.mean)])
+    weight = np.sqrt(np.maximum(spread[-1], 1e-6))
+    columns = np.ascontiguousarray((spread[:-1] / weight).T)
     begun = time.perf_counter()
     for y in counts:
         nnls(columns, y / weight)
@@ -168,12 +169,18 @@ def measure(folder: Path, n_points: int) -> bool:
     single = nnls_seconds(plain, plan)
     good = report("plain: over read + cast + two matrix products", f"{ours / limit:.2f} ({ours:.2f} s, {n_points / ours:,.0f}/s)",
                   "<= 2.0, aim 1.3", ours <= 2.0 * limit)  # fmt: skip
-    good &= report("gzip-4: over a plain h5py read", f"{zipped / read:.2f} ({zipped:.2f} s)", "<= 1.15", zipped <= 1.15 * read)
-    good &= report("throughput over an nnls loop", f"{single * n_points / ours:.0f}", ">= 100", single * n_points >= 100 * ours)
+    good &= report(
+        "gzip-4: over a plain h5py read", f"{zipped / read:.2f} ({zipped:.2f} s)", "<= 1.15", zipped <= 1.15 * read
+    )
+    good &= report(
+        "throughput over an nnls loop", f"{single * n_points / ours:.0f}", ">= 100", single * n_points >= 100 * ours
+    )
     stages, seconds = whole(plain, folder / "whole.h5")
     thinking = sum(stages.seconds.get(s, 0.0) for s in ("starting", *IDENTIFYING))
     print("        " + ", ".join(f"{k} {v:.2f} s" for k, v in stages.seconds.items()))
-    return good & report("start-up and identification", f"{thinking:.1f} s of {seconds:.1f} s", "<= 6 s", thinking <= 6.0)
+    return good & report(
+        "start-up and identification", f"{thinking:.1f} s of {seconds:.1f} s", "<= 6 s", thinking <= 6.0
+    )
 
 
 def million(folder: Path) -> bool:
