@@ -20,6 +20,8 @@ from xrfid.fit.nuisance import (
 from xrfid.fit.solve import LinearProblem, Solution, solve
 from xrfid.response.series import SeriesKey
 
+PARTIAL_SHARE = 0.3
+"""Standard uncertainty of each partial overlap's pulse-pair time, in units of the full overlap's."""
 MODEL_PRECISION = 0.002
 """Relative precision to which a strong line's shape can be known at all; adds to the variance per channel."""
 
@@ -56,8 +58,8 @@ class Ingredients:
         Piled-up counts per nanosecond of pulse-pair time (or per unit, if the live time is unknown).
     pair_time : tuple of (mean, sigma), or None
         What is known of that time.
-    partial : ndarray, shape (n,), or None
-        The same for partial overlaps; None if not offered.
+    partial : ndarray, shape (n_parts, n)
+        The same for partial overlaps.
     tolerances : Tolerances
     peaks : tuple of FreePeak
         Peaks that no line explains.
@@ -72,7 +74,7 @@ class Ingredients:
     curvature: float
     pairs: NDArray[np.float64]
     pair_time: tuple[float, float] | None
-    partial: NDArray[np.float64] | None
+    partial: NDArray[np.float64]
     tolerances: Tolerances
     peaks: tuple[FreePeak, ...] = ()
     scatter_expected: Mapping[int, tuple[float, float]] = field(default_factory=dict)
@@ -223,9 +225,11 @@ def _assemble(
             prior[len(labels)] = ingredients.pair_time
         parts.append(ingredients.pairs[None])
         labels.append(("sum",))
-    if ingredients.partial is not None:
-        parts.append(ingredients.partial[None])
-        labels.append(("partial",))
+        for i, _ in enumerate(ingredients.partial):
+            if ingredients.pair_time is not None:
+                prior[len(labels) + i] = (0.0, PARTIAL_SHARE * ingredients.pair_time[1])
+        parts.append(ingredients.partial)
+        labels += [("partial", str(i)) for i in range(ingredients.partial.shape[0])]
     parts += [p.column[None] for p in ingredients.peaks]
     labels += [p.label for p in ingredients.peaks]
     bounded = len(labels)

@@ -14,7 +14,7 @@ from xrfid.fit.model import Ingredients
 from xrfid.fit.nuisance import Tolerances
 from xrfid.prepare.snip import continuum, smoothed
 from xrfid.response.detector import LineShape
-from xrfid.response.pileup import pair_spectrum, primary_spectrum
+from xrfid.response.pileup import pair_spectrum, partial_overlaps, primary_spectrum
 from xrfid.response.series import Prediction
 from xrfid.spectrum import EnergyScale, Spectrum
 
@@ -73,7 +73,7 @@ def ingredients(
         curvature=CURVATURE,
         pairs=pairs,
         pair_time=pair_time,
-        partial=None,
+        partial=grouping.sum(partial_overlaps(primary, setting.scale)) * unit,
         tolerances=tolerances,
         scatter_expected=scatter_expected or {},
     )

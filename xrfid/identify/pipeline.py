@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -70,7 +72,7 @@ def search(spectrum: Spectrum, instrument: Instrument, settings: Settings) -> Wo
     for enter, known in ((_FIRST_PASS, False), (threshold, True), (threshold, True)):
         if fit is not None:
             setting = refined(setting, fit)
-        tolerances = Tolerances(matrix_known=known)
+        tolerances = _tolerances(calibration, known)
         drawn = ingredients(spectrum, prediction, fractions, setting, tolerances, anode.expected)
         drawn, fit = _select(drawn, kept, candidates, instrument, settings, enter, thorough=known)
         anode = anode_in_sample(drawn, fit)
@@ -80,6 +82,16 @@ def search(spectrum: Spectrum, instrument: Instrument, settings: Settings) -> Wo
     assert fit is not None
     return Work(spectrum, instrument, settings, calibration, prediction, setting, composition, drawn, fit, anode,
                 candidates, threshold)  # fmt: skip
+
+
+def _tolerances(calibration: Calibration, matrix_known: bool) -> Tolerances:
+    """The usual tolerances, wider where the energy scale is known less well."""
+    usual = Tolerances(matrix_known=matrix_known)
+    return replace(
+        usual,
+        offset_kev=max(usual.offset_kev, calibration.offset_sigma_kev),
+        gain=max(usual.gain, calibration.gain_sigma_kev / calibration.scale.gain_kev),
+    )
 
 
 def _select(

@@ -61,39 +61,39 @@ def primary_spectrum(counts: NDArray[np.float64], scale: EnergyScale, per_pair: 
     return np.asarray(np.maximum(counts - per_pair * pair_spectrum(counts, scale), 0.0))
 
 
-def partial_overlap_spectrum(pairs: NDArray[np.float64], counts: NDArray[np.float64], scale: EnergyScale,
-                             n_steps: int = 12) -> NDArray[np.float64]:  # fmt: skip
-    """Spectrum of pairs of which the second pulse adds only a part of its height.
+PARTS = np.array([0.1, 0.25, 0.4, 0.55, 0.7, 0.85])
+"""Shares of the second pulse's height at which partial overlaps are described."""
+_FINE = 3
 
-    Simple electronics take the maximum of two shaped pulses that overlap on their flanks: the
-    recorded sum lies anywhere between the larger pulse and the full sum. Taken as flat in the part
-    added, which gives the broad humps between E and 2E that such set-ups show.
+
+def partial_overlaps(counts: NDArray[np.float64], scale: EnergyScale) -> NDArray[np.float64]:
+    """Spectra of pairs of which the second pulse adds only a part of its height.
+
+    Simple electronics take the maximum of two shaped pulses that overlap on their flanks: what is
+    recorded lies anywhere between the larger pulse and the full sum, as humps between E and 2E. How
+    often each part occurs depends on the electronics; it is described by triangular weights around
+    `PARTS`.
 
     Returns
     -------
-    ndarray, shape (n_channels,)
-        Same units as `pair_spectrum`, the part added uniform between 0 and 1.
+    ndarray, shape (6, n_channels)
+        Same units as `pair_spectrum`; one row a part.
     """
     n = counts.size
-    energy = scale.energy_kev(np.arange(n))
-    seen = np.where(energy > 0, counts, 0.0)
-    out = np.zeros(n)
     edges = scale.edges_kev(n)
+    seen = np.where(scale.energy_kev(np.arange(n)) > 0, counts, 0.0)
     cumulative = np.concatenate([[0.0], np.cumsum(seen)])
-    for part in (np.arange(n_steps) + 0.5) / n_steps:
-        # the second pulse's spectrum squeezed to `part` of its energy
-        squeezed = np.diff(np.interp(edges / part, edges, cumulative))
-        out += pair_like(seen, squeezed, scale)
-    return np.asarray(out / n_steps * (pairs.sum() / max(out.sum() / n_steps, 1e-300)))
-
-
-def pair_like(first: NDArray[np.float64], second: NDArray[np.float64], scale: EnergyScale) -> NDArray[np.float64]:
-    """Convolution of two spectra on the energy axis, shape (n_channels,)."""
-    n = first.size
-    both = np.maximum(fftconvolve(first, second), 0.0)
-    start = int(round(scale.offset_kev / scale.gain_kev))
-    out = np.zeros(n)
-    index = np.arange(both.size) + start
-    ok = (index >= 0) & (index < n)
-    out[index[ok]] = both[ok]
+    step = float(PARTS[1] - PARTS[0])
+    squeezed = np.zeros((PARTS.size, n))
+    for i, middle in enumerate(PARTS):
+        for k in range(-_FINE + 1, _FINE):
+            part, weight = middle + step * k / _FINE, (1.0 - abs(k) / _FINE) / _FINE
+            if part > 0.02:
+                squeezed[i] += weight * np.diff(np.interp(edges / part, edges, cumulative, left=0.0))
+    both = np.maximum(fftconvolve(squeezed, seen[None], axes=1), 0.0)
+    start = round(scale.offset_kev / scale.gain_kev)
+    out = np.zeros((PARTS.size, n))
+    index = np.arange(both.shape[1]) + start
+    inside = (index >= 0) & (index < n)
+    out[:, index[inside]] = both[:, inside]
     return out
