@@ -22,9 +22,6 @@ ELEMENT_COST = 13.0
 PEAK_COST = 22.0
 """Deviance that an element, or a peak of free position and width, must be worth (one false in a hundred spectra)."""
 
-COINCIDENCE_COST = 40.0
-"""More deviance still if the peak happens to fall on the element's own main line."""
-
 
 def _weakest_first(ingredients: Ingredients, fit: Fit, keep: Sequence[SeriesKey], below: float) -> list[int]:
     """Atomic numbers of the elements less significant than `below`, weakest first."""
@@ -53,7 +50,7 @@ def unmask_peaks(ingredients: Ingredients, fit: Fit, keep: Sequence[SeriesKey]) 
             continue
         saved = ELEMENT_COST + PEAK_COST * (len(near) - 1)
         if _on_its_line(bare, keys, peak):
-            saved -= COINCIDENCE_COST
+            continue  # that would be the element by another name; its missing lines are the verdict's business
         changed = bare.with_peaks((*bare.peaks, peak))
         trial = fit_series(changed, without.keys, without, rounds=1, iterations=4, resize=False)
         if trial.objective < fit.objective + saved:
