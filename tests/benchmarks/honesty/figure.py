@@ -63,7 +63,8 @@ def _levels(ax: Any, scores: Scores) -> None:
     ax.vlines(asked, np.maximum(low, floor), high, color=_MARK, lw=1.2)
     some = seen > 0
     ax.plot(asked[some], seen[some], "o", color=_MARK, ms=5)
-    ax.plot(asked[~some], high[~some], "v", color=_MARK, ms=5, label="none seen: upper end")
+    if not np.all(some):
+        ax.plot(asked[~some], high[~some], "v", color=_MARK, ms=5, label="none seen: upper end")
     title = f"Invented: {scores.false_per_spectrum:.3f} per spectrum"
     ax.set(xscale="log", yscale="log", title=title)
     ax.set(xlabel="false-identification level asked for", ylabel="false elements per spectrum")

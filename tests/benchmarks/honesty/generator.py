@@ -46,8 +46,6 @@ class Case:
     ----------
     components : dict
         By series name ("Fe K"): mean counts, escape peaks included, shape (n,).
-    full_energy : dict
-        By series name: mean counts in its full-energy peaks, pile-up losses taken off.
     instrument_parts : dict
         "scatter", "continuum", "diffraction": mean counts, shape (n,).
     mean, counts : ndarray, shape (n,)
@@ -61,7 +59,6 @@ class Case:
     setup: Setup
     live_s: float
     components: dict[str, Array]
-    full_energy: dict[str, float]
     instrument_parts: dict[str, Array]
     mean: Array
     counts: Array
@@ -69,7 +66,6 @@ class Case:
     diffraction_kev: tuple[float, ...]
     beam: Beam = field(repr=False)
     nature: Nature = field(repr=False)
-    scale: float = 1.0
 
     @property
     def per_pair(self) -> float:
@@ -166,26 +162,15 @@ def _finish(
     truth: dict[str, dict[str, dict[str, float]]] = {}
     for name, area in full.items():
         element, series = name.split()
-        s = sigma.get(name, math.inf) * full[name] / max(float(components[name].sum()), 1e-300)
-        truth.setdefault(element, {})[series] = {"area": area, "sigma": s, "z": area / s if s > 0 else 0.0}
+        if name in sigma:  # the others have no counts to speak of
+            s = sigma[name] * area / float(components[name].sum())
+            truth.setdefault(element, {})[series] = {"area": area, "sigma": s, "z": area / s}
     return Case(
-        drawn.index,
-        drawn.recipe["name"],
-        drawn.recipe["kind"],
-        drawn.sample,
-        setup,
-        drawn.live_s,
-        components,
-        full,
-        others,
-        mean,
-        rng.poisson(mean).astype(float),
-        truth,
-        peaks,
-        drawn.light,
-        drawn.nature,
-        k,
-    )
+        index=drawn.index, material=drawn.recipe["name"], kind=drawn.recipe["kind"], sample=drawn.sample, setup=setup,
+        live_s=drawn.live_s, components=components, instrument_parts=others, mean=mean,
+        counts=rng.poisson(mean).astype(float), truth=truth, diffraction_kev=peaks, beam=drawn.light,
+        nature=drawn.nature,
+    )  # fmt: skip
 
 
 def draw_sample(rng: np.random.Generator, recipe: dict[str, Any]) -> Sample:
@@ -276,8 +261,8 @@ def unit_response(case: Case, element: str) -> dict[str, Part]:
 def with_trace(case: Case, element: str, series: str, area: float, rng: np.random.Generator) -> Array:
     """Counts of the same measurement, repeated, with a trace of `element` of `area` counts in `series`."""
     parts = unit_response(case, element)
-    k = area / parts[f"{element} {series}"].full
     raw = sum(case.components.values()) + sum(case.instrument_parts.values())
+    k = area / (parts[f"{element} {series}"].full * survival(raw, case.per_pair))
     raw = raw + k * sum(p.shape for p in parts.values())
     return rng.poisson(piled_up(raw, case.setup.channels, case.per_pair)).astype(float)
 
