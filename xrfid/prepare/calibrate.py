@@ -30,7 +30,8 @@ CLEAR_DRIFT_EV = 3.0
 """Shifts between measurements below this are not called drift."""
 FANO_FREE_SPAN = 2.5
 """Highest over lowest line energy from which noise and Fano factor are fitted separately."""
-_SCALES_EACH = 10
+_SCALES_EACH = 8
+_POLISHED = 6
 
 
 @dataclass(frozen=True, eq=False)
@@ -118,7 +119,8 @@ def calibrate(references: Sequence[Reference], instrument: Instrument) -> Calibr
     for reference in references:
         for element in reference.elements:
             if element not in ATOMIC_NUMBER:
-                raise InputError(reference.name, f'"{element}" is no element symbol', did_you_mean(element, ATOMIC_NUMBER))
+                hint = did_you_mean(element, ATOMIC_NUMBER)
+                raise InputError(reference.name, f'"{element}" is no element symbol', hint)
     searches = [_search(r, instrument) for r in references]
     trials = _common_start(references, searches, instrument)
     works = [
@@ -127,8 +129,9 @@ def calibrate(references: Sequence[Reference], instrument: Instrument) -> Calibr
     ]
     start = trials[0]
     shape = LineShape.of(instrument.detector)
-    _enough(_used(references, works, start.scale, shape.with_resolution(start.resolution(searches[0].fano, searches[0].pair_ev))))
-    result = _fit(works, start.scale, start.resolution(searches[0].fano, searches[0].pair_ev), shape, searches[0].bounds[1])
+    resolution = start.resolution(searches[0].fano, searches[0].pair_ev)
+    _enough(_used(references, works, start.scale, shape.with_resolution(resolution)))
+    result = _fit(works, start.scale, resolution, shape, searches[0].bounds[1])
     return _summary(result, references, works, shape)
 
 
@@ -154,35 +157,45 @@ def _common_start(references: Sequence[Reference], searches: list[Search], instr
         stated = [s for s in (reference.spectrum.scale, instrument.energy_scale) if s is not None]
         found = search.hypotheses()[:_SCALES_EACH] if len(search.real) > 1 else []
         scales += [s for s in (*stated, *found) if 5e-4 < s.gain_kev < 0.5]
-    ranked: list[tuple[float, EnergyScale]] = []
-    for scale in scales:
-        best = max((_moved(s, scale) for s in searches), key=lambda t: len(t.chosen))
-        total = sum(s.bench.try_out(best.scale, s.noise(best.scale)).score for s in searches)
-        ranked.append((total, best.scale))
+    ranked = sorted((_total(searches, scale) for scale in scales), key=lambda x: x[0])[:_POLISHED]
     if not ranked:
         raise Untrustworthy("no energy scale fits the named elements; check the names")
-    ranked.sort(key=lambda x: x[0])
-    score, scale = ranked[0]
-    rival = next(((t, s) for t, s in ranked[1:] if _elsewhere(s, scale, searches)), None)
+    exact = sorted((_total(searches, _exact(searches, scale)) for _, scale in ranked), key=lambda x: x[0])
+    score, scale = exact[0]
+    trials = [s.bench.try_out(scale, s.noise(scale)) for s in searches]
+    rival = next(((t, s) for t, s in exact[1:] if _elsewhere(s, scale, searches, trials)), None)
     if rival is not None and rival[0] - score < LEAST_LEAD:
         raise Untrustworthy(
             f"two energy scales fit the named elements equally well ({scale.gain_kev * 1e3:.4g} and "
             f"{rival[1].gain_kev * 1e3:.4g} eV a channel); add a measurement of an element with other energies"
         )
-    trials = [s.bench.try_out(scale, s.noise(scale)) for s in searches]
     for reference, search, trial in zip(references, searches, trials, strict=True):
         _all_seen(reference, search, trial)
     return trials
 
 
-def _elsewhere(a: EnergyScale, b: EnergyScale, searches: list[Search]) -> bool:
-    """Whether two scales put a strong peak more than half its width apart: other lines, not the same ones refined."""
-    strong = [p for s in searches for p in s.real[:6]]
-    return any(abs(float(a.energy_kev(p.channel) - b.energy_kev(p.channel))) > 0.5 * p.fwhm * b.gain_kev for p in strong)
+def _total(searches: list[Search], scale: EnergyScale) -> tuple[float, EnergyScale]:
+    """Score of a scale over all measurements, after it has moved to where the richest measurement wants it."""
+    moved = [s.bench.refined(s.bench.try_out(scale, s.noise(scale)), 3) for s in searches]
+    best = max(moved, key=lambda t: len(t.chosen)).scale
+    return sum(s.bench.try_out(best, s.noise(best)).score for s in searches), best
 
 
-def _moved(search: Search, scale: EnergyScale) -> Trial:
-    return search.bench.refined(search.bench.try_out(scale, search.noise(scale)), 3)
+def _exact(searches: list[Search], scale: EnergyScale) -> EnergyScale:
+    """A scale polished on the measurement that shows most series."""
+    trials = [(s, s.bench.try_out(scale, s.noise(scale))) for s in searches]
+    search, trial = max(trials, key=lambda x: len(x[1].chosen))
+    return search.polished(trial).scale
+
+
+def _elsewhere(a: EnergyScale, b: EnergyScale, searches: list[Search], trials: list[Trial]) -> bool:
+    """Whether two scales put an explained peak more than half its width apart: other lines, not the same refined."""
+    for search, trial in zip(searches, trials, strict=True):
+        at = trial.tops(search.reduced)
+        apart = np.abs(a.energy_kev(at) - b.energy_kev(at))
+        if np.any(apart > 0.5 * search.widths.fwhm(at) * b.gain_kev):
+            return True
+    return False
 
 
 def _all_seen(reference: Reference, search: Search, trial: Trial) -> None:
@@ -235,7 +248,8 @@ def _fit(works: list[LineWork], scale: EnergyScale, resolution: Resolution, shap
 
     def misfit(values: Any) -> NDArray[np.float64]:
         at = EnergyScale(float(values["offset"]), float(values["gain"]))
-        drawn = shape.with_resolution(Resolution(float(values["noise"]), float(values["fano"]), resolution.pair_energy_ev))
+        noise, fano = float(values["noise"]), float(values["fano"])
+        drawn = shape.with_resolution(Resolution(noise, fano, resolution.pair_energy_ev))
         return np.concatenate([w.misfit(at, drawn, r)[0] for w, r in zip(works, robust, strict=True)])
 
     result: Any = None
@@ -260,14 +274,15 @@ def _summary(result: Any, references: Sequence[Reference], works: list[LineWork]
     lines = _used(references, works, scale, drawn)
     sigma = {name: float(result.params[name].stderr or 0.0) for name in ("offset", "gain", "noise", "fano")}
     energies = np.array([line.energy_kev for line in lines])
-    span_channels = float(np.ptp(energies)) / scale.gain_kev
     # line energies are known to a little over 1 eV, whatever the counts
-    gain_sigma = math.hypot(sigma["gain"], 1.4e-3 * LINE_ENERGY_EV / span_channels)
-    offset_sigma = math.hypot(sigma["offset"], 1.4e-3 * LINE_ENERGY_EV * float(energies.max()) / float(np.ptp(energies)))
+    tilt = 1.4e-3 * LINE_ENERGY_EV / float(np.ptp(energies))
+    gain_sigma = math.hypot(sigma["gain"], tilt * scale.gain_kev)
+    offset_sigma = math.hypot(sigma["offset"], tilt * float(energies.max()))
     resolution = drawn.resolution
     fwhm = resolution.fwhm_mn_ka_ev
     statistical = fwhm**2 - resolution.noise_ev**2
-    fwhm_sigma = math.hypot(resolution.noise_ev * sigma["noise"], 0.5 * statistical * sigma["fano"] / resolution.fano) / fwhm
+    by_fano = 0.5 * statistical * sigma["fano"] / resolution.fano
+    fwhm_sigma = math.hypot(resolution.noise_ev * sigma["noise"], by_fano) / fwhm
     return Calibrated(scale, offset_sigma, gain_sigma, resolution, fwhm_sigma, tuple(lines), _drifts(lines),
                       float(result.redchi))  # fmt: skip
 

@@ -15,8 +15,8 @@ from numpy.typing import NDArray
 from xrfid.prepare.patterns import Patterns
 from xrfid.prepare.peaks import CHANNEL_VARIANCE, Peak, Widths, refit
 from xrfid.prepare.reduced import BINS_PER_FWHM, reduce
-from xrfid.prepare.snip import smoothed
 from xrfid.prepare.sieve import Sieve
+from xrfid.prepare.snip import smoothed
 from xrfid.spectrum import FWHM_PER_SIGMA, EnergyScale, Resolution
 
 PLAUSIBLE_GAIN_KEV = (0.001, 0.2)
@@ -66,7 +66,8 @@ def look(counts: NDArray[np.float64], scale: EnergyScale, resolution: Resolution
     sure = np.flatnonzero(value[:_FITTED] > 0.4)
     shift = float(np.median(energy[sure] - scale.energy_kev(at[sure]))) if sure.size else 0.0
     away = np.where(value[:_FITTED] > 0, np.abs(energy[:_FITTED] - scale.energy_kev(at[:_FITTED])), 1.0)
-    return Look(len(peaks), covered, shift, float(np.sort(away)[1]), _noise([f for f in fits if f.area > 0], scale, resolution))
+    noise = _noise([f for f in fits if f.area > 0], scale, resolution)
+    return Look(len(peaks), covered, shift, float(np.sort(away)[1]), noise)
 
 
 def _as_wide_as_the_tallest(counts: NDArray[np.float64], scale: EnergyScale, resolution: Resolution) -> Resolution:
@@ -91,7 +92,8 @@ def _as_wide_as_the_tallest(counts: NDArray[np.float64], scale: EnergyScale, res
 def _noise(peaks: list[Peak], scale: EnergyScale, resolution: Resolution) -> float | None:
     """Electronic FWHM of the narrower of the strongest peaks (blends are wider, never narrower)."""
     slope = FWHM_PER_SIGMA**2 * resolution.fano * resolution.pair_energy_ev * 1e-3
-    square = [(p.fwhm**2 - CHANNEL_VARIANCE) * scale.gain_kev**2 - slope * float(scale.energy_kev(p.channel)) for p in peaks]
+    g2 = scale.gain_kev**2
+    square = [(p.fwhm**2 - CHANNEL_VARIANCE) * g2 - slope * float(scale.energy_kev(p.channel)) for p in peaks]
     positive = sorted(s for s in square if s > 0)
     return float(np.sqrt(positive[len(positive) // 3])) if positive else None
 

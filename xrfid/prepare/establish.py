@@ -24,6 +24,7 @@ from xrfid.prepare.find_scale import (
     search_trials,
 )
 from xrfid.prepare.patterns import patterns_of
+from xrfid.prepare.polish import LINE_ENERGY_EV
 from xrfid.response.detector import escape_lines
 from xrfid.spectrum import FANO_FACTOR, PAIR_ENERGY_EV, EnergyScale, Resolution, Spectrum
 
@@ -116,6 +117,11 @@ def _checked(spectrum: Spectrum, scale: EnergyScale, origin: str, instrument: In
     escape = max(escape_lines(instrument.detector.material), key=lambda line: line.share * line.yield_)
     seen = look(spectrum.counts, stated.usable, instrument.detector.resolution, patterns, escape.loss_kev)
     if not seen.agrees:
+        other = instrument.energy_scale
+        if origin == "file" and other is not None:
+            made = _checked(spectrum, other, "instrument", instrument, end)
+            note = f"{stated.whose} does not fit the peaks; that of the instrument file is taken"
+            return replace(made, stated=stated.scale, note=_joined(note, made.note))
         return _looked_into(spectrum, stated, seen, instrument, end)
     resolution, worn = _resolution(seen.noise_kev, instrument)
     made = Calibration(stated.usable, resolution, origin, abs(seen.shift_kev) * 1e3, _joined(stated.note, worn))
@@ -142,14 +148,12 @@ def _looked_into(spectrum: Spectrum, stated: _Stated, seen: Look, instrument: In
     assert stated.usable is not None
     search = Search(spectrum.counts, instrument, end)
     if len(search.real) < 2:
-        resolution, worn = _resolution(None, instrument)
-        return Calibration(stated.usable, resolution, stated.origin, 0.0, _joined(stated.note, worn))
+        return _kept(stated, "", instrument)
     near = _near(search, stated.usable)
-    moved = _shift(search, near.scale, stated.usable)[0]
-    if abs(moved) > _ANOTHER_ELEMENT_KEV:
-        return _near_by(search, stated, instrument)
     if near.trial.explained > _WELL and seen.covered > 0.4:
-        return _corrected(near, search, stated, instrument)
+        if _of_a_neighbour(near, stated.usable) < _SAME_ELEMENTS:
+            return _corrected(near, search, stated, instrument)
+        return _near_by(search, stated, instrument)
     try:
         found = decide(search, search_trials(search, (stated.usable,)))
     except Untrustworthy:
@@ -176,28 +180,43 @@ def _near_by(search: Search, stated: _Stated, instrument: Instrument) -> Calibra
     try:
         found = decide(search, search.best([*around, *search.hypotheses()]))
     except Untrustworthy:
-        resolution, worn = _resolution(None, instrument)
         note = (
             f"{stated.whose} does not fit the peaks, but this spectrum cannot say what the right one is; used as "
             "stated; calibrate on known elements"
         )
-        return Calibration(stated.usable, resolution, stated.origin, 0.0, _joined(_joined(stated.note, note), worn))
+        return _kept(stated, note, instrument)
     return _corrected(found.best, search, stated, instrument)
 
 
 _AROUND_KEV = (-0.45, -0.22, 0.0, 0.22, 0.45)
-_ANOTHER_ELEMENT_KEV = 0.1
-"""From such a shift on the neighbouring element's lines may be meant."""
+_SAME_ELEMENTS = 0.36
+"""Shift, in distances to the neighbouring element's line, up to which the lines are taken for the stated ones."""
 _WELL = 0.9
 """Share of the peaks explained near the stated scale that makes a search for others needless."""
 
 
-def _shift(search: Search, new: EnergyScale, old: EnergyScale) -> tuple[float, float]:
-    """Largest change of energy at a strong peak, keV, and that peak's channel."""
-    at = np.array([p.channel for p in search.real[:6]])
+def _shift(candidate: Candidate, new: EnergyScale, old: EnergyScale) -> tuple[float, float]:
+    """Largest change of energy at a clear line, keV, and that line's energy."""
+    energy = np.array([r[1] for r in candidate.polished.residuals if r[3] < 10.0] or [6.0])
+    at = new.channel(energy)
     change = new.energy_kev(at) - old.energy_kev(at)
     worst = int(np.argmax(np.abs(change)))
-    return float(change[worst]), float(at[worst])
+    return float(change[worst]), float(energy[worst])
+
+
+def _of_a_neighbour(candidate: Candidate, stated: EnergyScale) -> float:
+    """Largest shift of a clear line, as a share of the distance to the same line of the next element.
+
+    Moseley's law: K-alpha lies at 10.2 eV (Z - 1)^2, so the next one is ``2 sqrt(10.2 eV E)`` away; L-alpha about
+    0.42 times as far.
+    """
+    clear = [r for r in candidate.polished.residuals if r[3] < 10.0]
+    if not clear:
+        return 0.0
+    energy = np.array([r[1] for r in clear])
+    spacing = 2.0 * np.sqrt(0.0102 * energy) * np.array([1.0 if r[0].split()[1][0] == "K" else 0.42 for r in clear])
+    moved = np.abs(energy - stated.energy_kev(candidate.scale.channel(energy)))
+    return float(np.max(moved / spacing))
 
 
 def _near(search: Search, scale: EnergyScale) -> Candidate:
@@ -209,22 +228,52 @@ def _corrected(candidate: Candidate, search: Search, stated: _Stated, instrument
                ) -> Calibration:  # fmt: skip
     """Keep the stated scale, or replace it and say by how much it was off."""
     assert stated.usable is not None
-    shift, channel = _shift(search, candidate.scale, stated.usable)
-    sigma = candidate.polished.offset_sigma_kev + candidate.polished.gain_sigma_kev * channel
-    wrong = abs(shift) > max(CLEAR_SHIFT_KEV, 4.0 * min(sigma, 0.05))
-    if doubtful and (not wrong or candidate.trial.explained < _WELL - 0.1):
-        resolution, worn = _resolution(None, instrument)
-        note = f"{stated.whose} could not be confirmed from the peaks; used as stated"
-        return Calibration(stated.usable, resolution, stated.origin, 0.0, _joined(_joined(stated.note, note), worn))
-    if not wrong:
+    scale = _anchored(candidate, stated.usable)
+    shift, energy = _shift(candidate, scale, stated.usable)
+    if doubtful and candidate.trial.explained < _WELL - 0.1:
+        return _kept(stated, f"{stated.whose} could not be confirmed from the peaks; used as stated", instrument)
+    if abs(shift) <= CLEAR_SHIFT_KEV:
         made = _from_candidate(candidate, stated.note, instrument)
         return replace(made, scale=stated.usable, origin=stated.origin)
     note = (
-        f"{stated.whose} does not fit the peaks ({-shift * 1e3:+.0f} eV off at "
-        f"{float(candidate.scale.energy_kev(channel)):.2f} keV); corrected from them"
+        f"{stated.whose} does not fit the peaks ({-shift * 1e3:+.0f} eV off at {energy:.2f} keV); corrected from them"
     )
     made = _from_candidate(candidate, _joined(stated.note, note), instrument)
-    return replace(made, stated=stated.scale)
+    return replace(made, scale=scale, stated=stated.scale)
+
+
+def _kept(stated: _Stated, note: str, instrument: Instrument) -> Calibration:
+    """The stated scale, because nothing better is sure."""
+    assert stated.usable is not None
+    resolution, worn = _resolution(None, instrument)
+    return Calibration(stated.usable, resolution, stated.origin, 0.0, _joined(_joined(stated.note, note), worn))
+
+
+def _anchored(candidate: Candidate, stated: EnergyScale) -> EnergyScale:
+    """The scale that clear lines ask for, drawn towards the stated one where they do not reach.
+
+    One element's lines fix the energy there and nothing else; a scale from them alone would turn about that energy.
+    Far from the stated scale (a wrong factor, say) there is nothing to be drawn to.
+    """
+    lines = [r for r in candidate.polished.residuals if r[3] < 10.0]
+    exact = [r for r in lines if r[3] < 4.0]
+    spread = max((r[1] for r in exact), default=1.0) / min((r[1] for r in exact), default=1.0)
+    settled = len({r[0].split()[0] for r in exact}) > 1 and spread > 1.15
+    if not lines or settled or abs(candidate.scale.gain_kev / stated.gain_kev - 1.0) > 0.1:
+        return candidate.scale
+    energy, shift, sigma = (np.array([r[i] for r in lines]) for i in (1, 2, 3))
+    channel = candidate.scale.channel(energy - 1e-3 * shift)
+    blur = 20.0 * candidate.polished.resolution.fwhm_kev(energy)  # 2 per cent of the width, in eV
+    weight = 1.0 / (1e-6 * (sigma**2 + LINE_ENERGY_EV**2 + blur**2))
+    design = np.stack([np.ones_like(channel), channel])
+    normal = (design * weight) @ design.T
+    normal += np.diag([_OFFSET_PRIOR_KEV**-2, (_GAIN_PRIOR * stated.gain_kev) ** -2])
+    step = np.linalg.solve(normal, design @ (weight * (energy - stated.energy_kev(channel))))
+    return EnergyScale(stated.offset_kev + float(step[0]), stated.gain_kev + float(step[1]))
+
+
+_OFFSET_PRIOR_KEV, _GAIN_PRIOR = 0.2, 0.02
+"""How far a stated scale is off at all, as standard deviations."""
 
 
 def _replaced(spectrum: Spectrum, stated: _Stated, instrument: Instrument, end: float | None) -> Calibration:

@@ -17,7 +17,7 @@ from xrfid.errors import Untrustworthy
 from xrfid.instrument import Instrument
 from xrfid.prepare.end_point import end_cost, stop_channel
 from xrfid.prepare.patterns import Patterns, only, patterns_of
-from xrfid.prepare.peaks import Peak, Widths, find_peaks
+from xrfid.prepare.peaks import find_peaks
 from xrfid.prepare.polish import Polished, polish
 from xrfid.prepare.reduced import Reduced, reduce
 from xrfid.prepare.sieve import Grid, Sieve, grid_of
@@ -151,7 +151,8 @@ class Search:
         shape = LineShape.of(self.detector).with_resolution(trial.resolution(self.fano, self.pair_ev))
         most = self.bounds[1]
         made = polish(self.reduced, self.patterns, trial.chosen, shape, trial.scale, self.detector.material, most)
-        score = made.chi2 * self.reduced.net.size + self.bench.cost(list(trial.chosen), made.scale, (made.resolution.noise_ev * 1e-3) ** 2)
+        noise = (made.resolution.noise_ev * 1e-3) ** 2
+        score = made.chi2 * self.reduced.net.size + self.bench.cost(list(trial.chosen), made.scale, noise)
         score += float(self.end_cost(np.array(made.scale.offset_kev), np.array(made.scale.gain_kev)))
         return Candidate(trial, made, score)
 
@@ -197,7 +198,9 @@ def search_trials(search: Search, extra: tuple[EnergyScale, ...] = ()) -> list[T
         raise Untrustworthy(f"no energy scale: {few} out, which is too little to find it; give the scale")
     scales = [*search.hypotheses(), *extra]
     if not scales:
-        raise Untrustworthy("no energy scale: none puts the peaks at possible widths below the source's end; give the scale")
+        raise Untrustworthy(
+            "no energy scale: none puts the peaks at possible widths below the source's end; give the scale"
+        )
     return search.best(scales)
 
 
@@ -207,7 +210,9 @@ def decide(search: Search, trials: list[Trial]) -> Found:
     best = candidates[0]
     rival = next((c for c in candidates[1:] if different(c.scale, best.scale)), None)
     if best.trial.explained < LEAST_EXPLAINED or not best.trial.chosen:
-        raise Untrustworthy("no energy scale: no set of element lines explains the peaks; give the scale or one known element")
+        raise Untrustworthy(
+            "no energy scale: no set of element lines explains the peaks; give the scale or one known element"
+        )
     lead = np.inf if rival is None else rival.score - best.score
     needed = LEAST_LEAD + LEAST_LEAD_SHARE * abs(best.score)
     if best.polished.resolution.fwhm_mn_ka_ev > WIDE_EV:

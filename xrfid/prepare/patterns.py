@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 from xrfid.atoms.absorption import gas_transmission
 from xrfid.atoms.elements import NOBLE_GASES, UNSTABLE
 from xrfid.atoms.ionisation import subshell_emission
-from xrfid.atoms.lines import GROUPS, SUBSHELLS, line_table
+from xrfid.atoms.lines import GROUPS, line_table
 from xrfid.instrument import Instrument, Tube
 from xrfid.response.detector import efficiency
 from xrfid.response.excitation import excitation
@@ -23,7 +23,9 @@ from xrfid.response.scatter import compton_energy
 from xrfid.response.series import SeriesKey
 
 LOWEST_Z = 12
-_RARE = UNSTABLE | (NOBLE_GASES - {"Ar"}) | set("Sc Ga Ge Ru Rh In Te Cs Pr Sm Eu Gd Tb Dy Ho Er Tm Yb Lu Re Os Ir Tl".split())
+_RARE = UNSTABLE | (NOBLE_GASES - {"Ar"}) | set(
+    "Sc Ga Ge Ru Rh In Te Cs Pr Sm Eu Gd Tb Dy Ho Er Tm Yb Lu Re Os Ir Tl".split()
+)
 """Elements seldom met as main parts of a sample (common practice, no source): they must explain more."""
 SMALLEST_SHARE = 4e-3
 _COMMON_ANODES = ("Rh", "Ag", "Mo", "W", "Cu", "Pd", "Au", "Cr")
@@ -158,10 +160,10 @@ def _incoherent(instrument: Instrument, end: float, series: list[_Part], known_a
         angles = (90.0, 120.0, 150.0)
     if instrument.source is not None:
         made = excitation(instrument)
-        group = np.zeros(made.energy_kev.size, dtype=np.intp)
-        coherent: list[_Part] = [("source coherent", None, 0.0, made.energy_kev, made.photons / made.photons.sum(),
-                                  np.full(made.energy_kev.size, 0.3), np.zeros(made.energy_kev.size), group)]  # fmt: skip
-        return coherent + [_shifted(coherent[0], "source", a) for a in angles]
+        none = np.zeros(made.energy_kev.size)
+        share = made.photons / made.photons.sum()
+        coherent: _Part = ("source coherent", None, 0.0, made.energy_kev, share, none + 0.3, none, none.astype(np.intp))
+        return [coherent, *(_shifted(coherent, "source", a) for a in angles)]
     anodes = ((instrument.tube or Tube()).anode,) if known_anode else _COMMON_ANODES
     parts = []
     for part in series:

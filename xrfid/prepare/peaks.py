@@ -160,7 +160,7 @@ def _in_runs(counts: NDArray[np.float64], step: int) -> NDArray[np.float64]:
 
 
 def _kernel(fwhm: float) -> NDArray[np.float64]:
-    """Minus the second derivative of a Gaussian of this FWHM, zero in sum: what a smoothed second difference tends to."""
+    """Minus a Gaussian's second derivative, zero in sum: what a smoothed second difference tends to."""
     sigma = fwhm / FWHM_PER_SIGMA
     half = max(int(math.ceil(3.2 * sigma)), 2)
     x = np.arange(-half, half + 1) / sigma

@@ -15,8 +15,8 @@ from numpy.typing import NDArray
 from xrfid.atoms.lines import GROUPS
 from xrfid.prepare.patterns import Patterns
 from xrfid.prepare.reduced import Reduced, hats
-from xrfid.prepare.trial import damped
 from xrfid.prepare.snip import smoothed, snip
+from xrfid.prepare.trial import damped
 from xrfid.response.detector import DrawnLines, LineShape, draw, joined
 from xrfid.response.series import SeriesKey
 from xrfid.spectrum import FWHM_PER_SIGMA, EnergyScale, Resolution
@@ -79,10 +79,8 @@ def polish(reduced: Reduced, patterns: Patterns, chosen: tuple[int, ...], shape:
     """
     work = LineWork(reduced, patterns, _with_companions(patterns, chosen), material)
     resolution = shape.resolution
-    covariance = np.zeros((3, 3))
     for _ in range(_ROUNDS):
         solved = work.solve(scale, shape.with_resolution(resolution))
-        covariance = solved.covariance
         step = damped(solved.step, solved.channels, 0.4 * float(resolution.fwhm_kev(6.0)))
         if moving:
             scale = EnergyScale(scale.offset_kev + step[0], scale.gain_kev + step[1])

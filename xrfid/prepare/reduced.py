@@ -77,7 +77,8 @@ def reduce(counts: NDArray[np.float64], widths: Widths) -> Reduced:
     fine = counts[: whole * step].reshape(-1, step).mean(axis=1) - base
     # weak channels may be sum peaks already; folded once more they would promise triple sums
     fine = np.where(fine > _STRONG * fine.max(initial=0.0), fine, 0.0)
-    return Reduced(starts - 0.5, in_bin, net, variance, hats(in_bin.size, _HAT_BINS), _self_folded(fine), step)
+    edges = starts.astype(np.float64) - 0.5
+    return Reduced(edges, in_bin, net, variance, hats(in_bin.size, _HAT_BINS), _self_folded(fine), step)
 
 
 def _starts(counts: NDArray[np.float64], widths: Widths) -> NDArray[np.intp]:

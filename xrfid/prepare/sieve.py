@@ -1,4 +1,4 @@
-"""A quick sieve over all scales: how much of each peak could a series explain, its other lines allowing?
+"""A quick sieve over all scales: how much of each peak a series could explain, its other lines allowing.
 
 For every offset and gain of a grid, each series gets the largest area that none of its lines contradicts; a peak
 counts as explained as far as some series reaches it. Thousands of scales a tenth of a second, no columns drawn.
@@ -179,7 +179,8 @@ class Sieve:
 
     def _reached(self, grid: Grid, closeness: float) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Per scale and peak: how well its best line explains it, and that line's energy."""
-        scale, series, slot, reach = self._hits(grid.offset_kev, grid.gain_kev, self._near if closeness > 0.25 else self._exact)
+        upper = self._near if closeness > 0.25 else self._exact
+        scale, series, slot, reach = self._hits(grid.offset_kev, grid.gain_kev, upper)
         energy = np.broadcast_to(self._energy[series], slot.shape)
         hit = slot < self._weight.size - 1
         row = np.broadcast_to(scale[:, None], slot.shape)[hit]

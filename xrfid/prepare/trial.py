@@ -47,6 +47,10 @@ class Trial:
     pile: float
     variance: NDArray[np.float64]
 
+    def tops(self, reduced: Reduced) -> NDArray[np.float64]:
+        """Channels where the chosen candidates have their greatest counts."""
+        return np.asarray(reduced.centres[np.argmax(self.columns, axis=1)]) if self.chosen else np.zeros(1)
+
     def resolution(self, fano: float, pair_ev: float) -> Resolution:
         """The width as a resolution; noise below 20 eV is taken as 20 eV."""
         return Resolution(max(math.sqrt(max(self.noise, 0.0)) * 1e3, 20.0), fano, pair_ev)
@@ -162,7 +166,7 @@ class Bench:
         best = trial
         limit = 0.5 * float(_width(trial.noise, self.slope).fwhm_kev(6.0))
         for _ in range(rounds):
-            step = damped(self.step(best)[0], self._channels(best), limit)
+            step = damped(self.step(best)[0], best.tops(self.reduced), limit)
             noise = float(np.clip(best.noise + step[2], -0.35 * self.slope * 5.9, 1.0))
             gain = best.scale.gain_kev + step[1]
             if gain <= 0:
@@ -173,10 +177,6 @@ class Bench:
                 return new if new.score < best.score else best
             best = new
         return best
-
-    def _channels(self, trial: Trial) -> NDArray[np.float64]:
-        """Where the chosen candidates have their greatest counts."""
-        return np.asarray(self.reduced.centres[np.argmax(trial.columns, axis=1)]) if trial.chosen else np.zeros(1)
 
     def step(self, trial: Trial) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Gauss-Newton step in (offset, gain, squared noise) and its covariance, shapes (3,) and (3, 3)."""
