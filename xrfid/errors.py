@@ -1,9 +1,9 @@
 """What can go wrong, in the user's words.
 
-    XrfidError                 catch this to catch all of ours
-    ├── InputError             a file could not be read or makes no sense   (exit status 3)
-    ├── OutputError            a result could not be written                (exit status 3)
-    └── Untrustworthy          the work ran, its result must not be trusted (exit status 4)
+XrfidError                 catch this to catch all of ours
+├── InputError             a file could not be read or makes no sense   (exit status 3)
+├── OutputError            a result could not be written                (exit status 3)
+└── Untrustworthy          the work ran, its result must not be trusted (exit status 4)
 """
 
 from __future__ import annotations

@@ -137,7 +137,9 @@ class Instrument(_Table):
         try:
             text = Path(path).read_text(encoding="utf-8")
         except OSError as error:
-            raise InputError(str(path), f"cannot be read ({error.strerror})", "give an instrument file (TOML)") from None
+            raise InputError(
+                str(path), f"cannot be read ({error.strerror})", "give an instrument file (TOML)"
+            ) from None
         except UnicodeDecodeError:
             raise InputError(str(path), "is not a text file", "give an instrument file (TOML)") from None
         try:

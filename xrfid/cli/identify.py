@@ -27,15 +27,30 @@ if TYPE_CHECKING:
 @click.command()
 @click.argument("inputs", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="INPUT...")
 @instrument_option
-@click.option("--json", "json_path", type=click.Path(path_type=Path), help="Write the JSON document here ('-': standard output).")
+@click.option(
+    "--json", "json_path", type=click.Path(path_type=Path), help="Write the JSON document here ('-': standard output)."
+)
 @click.option("--page", "page_path", type=click.Path(path_type=Path), help="Write a self-contained HTML page here.")
-@click.option("--figure", "figure_path", type=click.Path(path_type=Path), help="Draw the spectrum (.png, .svg or .pdf).")
+@click.option(
+    "--figure", "figure_path", type=click.Path(path_type=Path), help="Draw the spectrum (.png, .svg or .pdf)."
+)
 @dataset_option
-@click.option("--layout", type=click.Path(path_type=Path), metavar="FILE.toml", help="How to read a text file whose shape cannot be guessed.")
+@click.option(
+    "--layout",
+    type=click.Path(path_type=Path),
+    metavar="FILE.toml",
+    help="How to read a text file whose shape cannot be guessed.",
+)
 @click.option("--present", metavar="Fe,Cu,...", help="Elements known to be in the sample.")
 @click.option("--absent", metavar="Fe,Cu,...", help="Elements known not to be in the sample.")
 @click.option("--series", default="KLM", show_default=True, help="Line series to use.")
-@click.option("--false-level", default=0.01, show_default=True, type=float, help="Falsely identified elements to accept per spectrum, on average.")
+@click.option(
+    "--false-level",
+    default=0.01,
+    show_default=True,
+    type=float,
+    help="Falsely identified elements to accept per spectrum, on average.",
+)
 @overwrite_option
 def command(inputs: tuple[Path, ...], instrument_path: Path | None, json_path: Path | None, page_path: Path | None,
             figure_path: Path | None, dataset: str | None, layout: Path | None, present: str | None,

@@ -37,7 +37,9 @@ def _show(report: ReachReport) -> None:
     from xrfid.identify.reach import COUNTS, GOOD, WEAK
 
     console = Console()
-    console.print(f"Detection limits in a spectrum of {COUNTS:.0e} counts, per cent by mass; best series of each element.\n")
+    console.print(
+        f"Detection limits in a spectrum of {COUNTS:.0e} counts, per cent by mass; best series of each element.\n"
+    )
     best = {}
     for r in report.series:
         limit = min(v for _, v in r.limits)
@@ -46,8 +48,8 @@ def _show(report: ReachReport) -> None:
     table = Table("Element", "Series", "Line / keV", "in light matter", "in steel", "", box=None, pad_edge=False)
     for _, r in best.values():
         limits = dict(r.limits)
-        table.add_row(r.element, r.series, f"{r.main_line_kev:.2f}", _percent(limits["light"]), _percent(limits["steel"]),
-                      r.grade)  # fmt: skip
+        shown = [_percent(limits[m]) for m in ("light", "steel")]
+        table.add_row(r.element, r.series, f"{r.main_line_kev:.2f}", *shown, r.grade)
     console.print(table)
     console.print(f"\nwithin reach: below {100 * GOOD:g} %; weak: below {100 * WEAK:g} %; hardly: above.")
     if report.inseparable:

@@ -86,9 +86,7 @@ def _best_series(areas: Mapping[SeriesKey, float], sigmas: Mapping[SeriesKey, fl
     return list(best.values())
 
 
-def _scattered_inside(
-    prediction: Prediction, fractions: NDArray[np.float64], window_kev: tuple[float, float]
-) -> float:
+def _scattered_inside(prediction: Prediction, fractions: NDArray[np.float64], window_kev: tuple[float, float]) -> float:
     s = prediction.scattered(fractions)
     low, high = window_kev
     coherent = s.coherent[(s.coherent_kev > low) & (s.coherent_kev < high)].sum()

@@ -125,7 +125,9 @@ def simulate(recipe: Recipe, instrument: Instrument) -> Simulated:
     series = draw(lines.with_escapes(instrument.detector.material), shape, edges, len(prediction.keys))
     raw = series.sum(axis=0) + _scattered(prediction, below, shape, grouping)
     if not raw.sum() > 0:
-        raise InputError("recipe", "this instrument and range show nothing of the sample", "check gain_kev and voltage_kv")
+        raise InputError(
+            "recipe", "this instrument and range show nothing of the sample", "check gain_kev and voltage_kv"
+        )
     per_unit = recipe.total_counts / float(raw.sum())
     expected, kept = _piled_up(raw * per_unit, scale, recipe.pulse_pair_ns * 1e-9 / recipe.live_time_s)
     counts = np.random.default_rng(recipe.seed).poisson(expected).astype(float)
@@ -150,7 +152,9 @@ def _line_weights(recipe: Recipe, prediction: Prediction, below: NDArray[np.floa
         return prediction.line_intensities(below) * below[of_element]
     mass = recipe.coating.mass_per_area
     if mass is None:
-        raise InputError("recipe, [coating]", "its mass per area is not stated", "give g_cm2, or thickness_um and density_g_cm3")
+        raise InputError(
+            "recipe, [coating]", "its mass per area is not stated", "give g_cm2, or thickness_um and density_g_cm3"
+        )
     above = _fractions(recipe.coating.composition, "coating")
     coated, veiled = prediction.layered_intensities(Layer(above, mass), Layer(below))
     return coated * above[of_element] + veiled * below[of_element]

@@ -75,9 +75,7 @@ def read_bytes(name: str, data: bytes, *, layout: str | Path | None = None) -> t
     return text.read(name, written)
 
 
-def read_spectrum(
-    path: str | Path, *, dataset: str | None = None, layout: str | Path | None = None
-) -> Spectrum:
+def read_spectrum(path: str | Path, *, dataset: str | None = None, layout: str | Path | None = None) -> Spectrum:
     """Read the one spectrum of a file; see `read_spectra`.
 
     Raises

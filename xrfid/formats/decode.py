@@ -37,7 +37,9 @@ def decoded(name: str, data: bytes) -> str:
     return text.replace("\r\n", "\n").replace("\r", "\n")
 
 
-def checked_counts(name: str, values: NDArray[np.float64], where: str = "channel") -> tuple[NDArray[np.float64], list[str]]:
+def checked_counts(
+    name: str, values: NDArray[np.float64], where: str = "channel"
+) -> tuple[NDArray[np.float64], list[str]]:
     """Return counts fit for a `Spectrum`, and what had to be assumed of them.
 
     Raises
@@ -55,7 +57,9 @@ def checked_counts(name: str, values: NDArray[np.float64], where: str = "channel
         raise InputError(f"{name}, {where} {bad[0]}", f"the count is {values[bad[0]]}", "counts must be finite")
     bad = np.flatnonzero(values < 0)
     if bad.size:
-        raise InputError(f"{name}, {where} {bad[0]}", f"the count is {values[bad[0]]:g}", "counts must be >= 0; give raw counts")
+        raise InputError(
+            f"{name}, {where} {bad[0]}", f"the count is {values[bad[0]]:g}", "counts must be >= 0; give raw counts"
+        )
     said = []
     if values.max(initial=0.0) > 1e15:
         raise InputError(name, f"a channel holds {values.max():g} counts", "give raw counts")

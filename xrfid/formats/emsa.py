@@ -109,7 +109,9 @@ def _values(name: str, rows: list[tuple[int, str]], kind: str) -> NDArray[np.flo
             try:
                 out.append(float(piece))
             except ValueError:
-                raise InputError(f"{name}, line {number}", f'found "{piece[:40]}" among the data', "a number is needed") from None
+                raise InputError(
+                    f"{name}, line {number}", f'found "{piece[:40]}" among the data', "a number is needed"
+                ) from None
     return np.array(out, dtype=float)
 
 
@@ -125,7 +127,9 @@ def _arrange(name: str, values: NDArray[np.float64], kind: str, points: int | No
         said.append("NPOINTS is not stated: as many points as there are")
     elif values.size < points:
         if not complete:
-            raise InputError(name, f"NPOINTS says {points}, but the data end after {values.size}", "the file is cut short")
+            raise InputError(
+                name, f"NPOINTS says {points}, but the data end after {values.size}", "the file is cut short"
+            )
         said.append(f"NPOINTS says {points}, but the file holds {values.size}: all are taken")
     elif values.size > points:
         said.append(f"NPOINTS says {points}, but the file holds {values.size}: the first {points} are taken")

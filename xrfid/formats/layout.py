@@ -80,11 +80,15 @@ def read_with_layout(name: str, text: str, layout_path: str | Path) -> tuple[Spe
         factor = 1e-3 if layout.energy_unit == "eV" else 1.0
         axis = axis_of(np.array(energies) * factor, "energy (keV)")
         if axis is None or axis.scale is None:
-            raise InputError(name, f"column {layout.energy_column} does not rise like an energy axis", "check the layout")
+            raise InputError(
+                name, f"column {layout.energy_column} does not rise like an energy axis", "check the layout"
+            )
         scale, said = axis.scale, [*said, *axis.said]
     elif layout.gain_kev is not None:
         scale = EnergyScale(layout.offset_kev or 0.0, layout.gain_kev)
-    return (Spectrum(checked, scale, layout.live_time_s, layout.real_time_s, layout.title, name, None, {}, tuple(said)),)
+    return (
+        Spectrum(checked, scale, layout.live_time_s, layout.real_time_s, layout.title, name, None, {}, tuple(said)),
+    )
 
 
 def _cell(name: str, number: int, cells: list[str], column: int, decimal: str) -> float:
@@ -92,4 +96,6 @@ def _cell(name: str, number: int, cells: list[str], column: int, decimal: str) -
         return float(cells[column - 1].replace(decimal, "."))
     except (IndexError, ValueError):
         found = cells[column - 1][:40] if column <= len(cells) else "nothing"
-        raise InputError(f"{name}, line {number}", f'column {column} holds "{found}"', "a number is needed; check the layout") from None
+        raise InputError(
+            f"{name}, line {number}", f'column {column} holds "{found}"', "a number is needed; check the layout"
+        ) from None

@@ -99,7 +99,9 @@ def channel_data(where: str, text: str, compression: str) -> NDArray[np.float64]
             raise InputError(where, "a zero in CountedZeroes data has no run length", "the data are damaged")
         size += int(run)
         if size > MOST_CHANNELS:
-            raise InputError(where, f"CountedZeroes expand to more than {MOST_CHANNELS} channels", "the data are damaged")
+            raise InputError(
+                where, f"CountedZeroes expand to more than {MOST_CHANNELS} channels", "the data are damaged"
+            )
         out.append(np.zeros(int(run)))
         i += 2
     return np.concatenate(out) if out else np.empty(0)

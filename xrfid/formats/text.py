@@ -22,7 +22,9 @@ _NUMBER = r"[+-]?(?:\d+(?:\.\d*)?|\.\d+)(?:[eE][+-]?\d+)?"
 _IS_NUMBER = re.compile(rf"^{_NUMBER}$")
 _COMMA_NUMBER = re.compile(r"^[+-]?\d+,\d+(?:[eE][+-]?\d+)?$")
 _STATEMENT = re.compile(r"^\W*([A-Za-z_µ%#/(). \-]*?[A-Za-z_)%.])\s*(?:[:=]|\s-\s|\t|,|;|\s{2,}|\s)\s*(.+?)\W*$")
-_MARK = re.compile(r"^\s*(?:<<\s*(.+?)\s*>>|\[\s*(.+?)\s*\]|\$\s*([A-Za-z_ ]+?)\s*:?|[*=-]{3,}\s*(.*?)\s*[*=-]{3,})\s*$")
+_MARK = re.compile(
+    r"^\s*(?:<<\s*(.+?)\s*>>|\[\s*(.+?)\s*\]|\$\s*([A-Za-z_ ]+?)\s*:?|[*=-]{3,}\s*(.*?)\s*[*=-]{3,})\s*$"
+)
 _CALIBRATION = re.compile(r"calib|energ", re.I)
 _END = re.compile(r"\bend\b|^/", re.I)
 _LIVE = re.compile(r"live|lebend|lifetime|\blt\b", re.I)
@@ -67,7 +69,9 @@ def read(name: str, text: str) -> tuple[Spectrum, ...]:
     facts = _facts(contents.statements)
     spectra = []
     for column in _columns(name, table, block.header):
-        counts, more = checked_counts(f"{name}, column {column.number}", column.counts, f"line {block.first_line} + row")
+        counts, more = checked_counts(
+            f"{name}, column {column.number}", column.counts, f"line {block.first_line} + row"
+        )
         notes = [*said, *column.said, *more]
         scale = column.scale
         if scale is None and scale_from_points is not None:
@@ -178,8 +182,14 @@ def _columns(name: str, table: NDArray[np.float64], header: list[str]) -> list[_
     if width == 1:
         return [_Column(1, "", table[:, 0], None, ())]
     axes = [axis_of(table[:, i], names[i]) for i in range(width)]
-    if width >= 4 and width % 2 == 0 and all(axes[i] is not None for i in range(0, width, 2)) and not any(
-        axes[i] is not None and axes[i].certain for i in range(1, width, 2)  # type: ignore[union-attr]
+    if (
+        width >= 4
+        and width % 2 == 0
+        and all(axes[i] is not None for i in range(0, width, 2))
+        and not any(
+            axes[i] is not None and axes[i].certain
+            for i in range(1, width, 2)  # type: ignore[union-attr]
+        )
     ):
         return [_column(i + 2, names[i + 1], table[:, i + 1], axes[i]) for i in range(0, width, 2)]
     leading = [i for i in range(min(2, width - 1)) if axes[i] is not None]

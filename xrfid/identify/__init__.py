@@ -1,4 +1,7 @@
-"""Select, weigh the evidence, decide: from a fit to verdicts. The package itself is callable: ``xrfid.identify(spectrum)``."""
+"""Select, weigh the evidence, decide: from a fit to verdicts.
+
+The package itself is callable: ``xrfid.identify(spectrum)``.
+"""
 
 from __future__ import annotations
 

@@ -1,4 +1,4 @@
-"""The tube's own element: is it the tube's scattered line, or does the sample hold the element as well?
+"""The tube's own element: scattered lines of the tube are told from lines of the sample.
 
 Scattered target lines and the sample's own lines have the same energies. What tells them apart is
 their size: scattered lines stand in a known proportion to the scattered continuum around them,

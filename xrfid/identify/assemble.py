@@ -78,10 +78,8 @@ def _finding(work: Work, found: ElementEvidence) -> Finding:
     if name in work.instrument.stray.elements:
         verdict = Verdict.INSTRUMENT
         reason = f"{name} lines come from the instrument itself, as its file says; the sample may hold {name} as well."
-    elif name == "Ar" and work.instrument.path.atmosphere == "air":
-        if verdict is not Verdict.NOT_DETECTED:
-            verdict = Verdict.INSTRUMENT
-            reason = "Argon of the air between sample and detector."
+    elif name == "Ar" and work.instrument.path.atmosphere == "air" and verdict is not Verdict.NOT_DETECTED:
+        verdict, reason = Verdict.INSTRUMENT, "Argon of the air between sample and detector."
     return Finding(name, verdict, reason, _series(work, found), found.evidence, found.rivals)
 
 
@@ -119,7 +117,9 @@ def _anode_finding(work: Work) -> Finding | None:
     significance = max((r.area / max(r.sigma, 1e-9) for r in results), default=0.0)
     if any(k.element == anode for k in work.fit.keys):
         return None
-    reason = f"{anode} is the tube's own target: its scattered lines are in every spectrum; the sample may hold {anode} too."
+    reason = (
+        f"{anode} is the tube's own target: its scattered lines are in every spectrum; the sample may hold {anode} too."
+    )
     return Finding(anode, Verdict.INSTRUMENT, reason, results,
                    Evidence(significance, significance**2, work.threshold, 1.0))  # fmt: skip
 
@@ -171,11 +171,7 @@ def _curves(work: Work, evidence: list[ElementEvidence]) -> Curves:
     parts["unassigned peaks"] = fit.part("peak")
     continuum = fit.part("continuum")
     parts["shape corrections"] = fit.model - continuum - sum(parts.values())
-    lines = tuple(
-        (str(k), name, energy, share)
-        for k in fit.keys
-        for name, energy, share in drawn.columns.line_list(k)
-    )
+    lines = tuple((str(k), name, energy, share) for k in fit.keys for name, energy, share in drawn.columns.line_list(k))
     return Curves(
         energy_kev=scale.energy_kev(np.arange(n)),
         counts=work.spectrum.counts,

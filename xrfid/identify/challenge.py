@@ -80,9 +80,7 @@ def _beside(ingredients: Ingredients, keys: Sequence[SeriesKey], peak: FreePeak)
     return any(abs(e - peak.energy_kev) < 1.5 * width for e in main)
 
 
-def exchange(
-    ingredients: Ingredients, fit: Fit, keep: Sequence[SeriesKey], candidates: Sequence[SeriesKey]
-) -> Fit:
+def exchange(ingredients: Ingredients, fit: Fit, keep: Sequence[SeriesKey], candidates: Sequence[SeriesKey]) -> Fit:
     """Swap an element for another wherever the other explains the counts better.
 
     The order in which elements entered must not decide who stays.

@@ -89,8 +89,10 @@ def _missing(line: LineEvidence) -> bool:
     """Whether a line that must show itself does not."""
     known_to = max(GROUPS[GROUP_INDEX[line.group]].tolerance, 0.15)
     short = line.predicted - line.observed
-    return line.own > 0.5 and line.observed < 0.5 * line.predicted and short > _VISIBLE * float(
-        np.hypot(line.sigma, known_to * line.predicted)
+    return (
+        line.own > 0.5
+        and line.observed < 0.5 * line.predicted
+        and short > _VISIBLE * float(np.hypot(line.sigma, known_to * line.predicted))
     )
 
 
@@ -121,8 +123,10 @@ def _rivals(
 
 
 def _share_channels(column: NDArray[np.float64], mine: NDArray[np.float64], variance: NDArray[np.float64]) -> bool:
-    cosines = (mine / variance) @ column / np.sqrt(
-        np.einsum("ij,ij->i", mine / variance, mine) * float(np.sum(column**2 / variance))
+    cosines = (
+        (mine / variance)
+        @ column
+        / np.sqrt(np.einsum("ij,ij->i", mine / variance, mine) * float(np.sum(column**2 / variance)))
     )
     return bool(np.max(cosines) > 0.3)
 
@@ -142,9 +146,7 @@ def free_peak_instead(ingredients: Ingredients, without: Fit, keys: Sequence[Ser
     for key in keys:
         group = max(ingredients.groups(key), key=lambda g: g.share)
         width = float(resolution.fwhm_kev(group.energy_kev))
-        trials = [
-            (float(e), w) for e in group.energy_kev + width * np.linspace(-1.0, 1.0, 21) for w in PEAK_WIDTHS
-        ]
+        trials = [(float(e), w) for e in group.energy_kev + width * np.linspace(-1.0, 1.0, 21) for w in PEAK_WIDTHS]
         drawn = np.array([draw_peak(e, w, resolution, grouping) for e, w in trials])
         z = score(without, drawn, ingredients.counts, np.maximum(without.variance, ingredients.counts)).z
         i = int(np.argmax(z))

@@ -89,8 +89,6 @@ def _limits(
     plain = np.einsum("ij,ij->i", weight, columns)
     own = np.einsum("ij,ij,ij->i", weight, weight, columns) / plain**2
     # y# = y* + k sqrt(u0^2 + own y#), solved for y#
-    limit = threshold + 0.5 * K_95**2 * own + K_95 * np.sqrt(
-        (0.5 * K_95 * own) ** 2 + sigma**2 + own * threshold
-    )
+    limit = threshold + 0.5 * K_95**2 * own + K_95 * np.sqrt((0.5 * K_95 * own) ** 2 + sigma**2 + own * threshold)
     upper = np.maximum(estimate, 0.0) + K_95 * sigma
     return CharacteristicLimits(estimate, sigma, threshold, limit, upper)

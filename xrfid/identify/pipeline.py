@@ -21,6 +21,7 @@ from xrfid.identify.select import backward, forward, free_peaks
 from xrfid.identify.settings import Settings
 from xrfid.identify.work import Work, fixed_series
 from xrfid.instrument import Instrument
+from xrfid.prepare.calibration import Calibration
 from xrfid.prepare.establish import establish
 from xrfid.response.detector import LineShape
 from xrfid.response.series import Prediction, SeriesKey
@@ -32,7 +33,9 @@ _PEAK_SIGNIFICANCE = 6.0
 _SCATTER_FROM_KEV = 5.0
 
 
-def identify(spectrum: Spectrum, instrument: Instrument | None = None, settings: Settings | None = None) -> Identification:
+def identify(
+    spectrum: Spectrum, instrument: Instrument | None = None, settings: Settings | None = None
+) -> Identification:
     """Say which elements a spectrum shows, how strongly, how sure that is, and why.
 
     Parameters

@@ -93,7 +93,9 @@ def reach(instrument: Instrument, counts: float = COUNTS) -> ReachReport:
             found.setdefault(key, []).append((name, limit))
     assert columns is not None
     made = tuple(
-        Reach(k.element, k.series, columns.line_list(k)[0][1], tuple(v), _grade(v)) for k, v in found.items() if k.z >= 11
+        Reach(k.element, k.series, columns.line_list(k)[0][1], tuple(v), _grade(v))
+        for k, v in found.items()
+        if k.z >= 11
     )
     return ReachReport(made, _inseparable(columns), instrument.assumed)
 
@@ -114,8 +116,8 @@ def _limits(columns: SeriesColumns, composition: dict[str, float], counts: float
     per_unit = counts / float(np.sum(expected))
     variance = np.maximum(expected * per_unit, 0.1)
     smooth = continuum * per_unit * smooth_functions(grouping, shape, KNOT_SPACING_FWHM, KNOT_LEAST_KEV)
-    others = np.concatenate([columns.unit[own > 0], [c.column for c in scatter if c.predicted > 0] or np.empty((0, grouping.n)),
-                             smooth[smooth.sum(axis=1) > 0]])  # fmt: skip
+    source_lines = [c.column[None] for c in scatter if c.predicted > 0]
+    others = np.concatenate([columns.unit[own > 0], *source_lines, smooth[smooth.sum(axis=1) > 0]])
     covariance = covariance_of((others / variance) @ others.T)
     weighted = columns.unit / variance
     plain = np.einsum("ij,ij->i", weighted, columns.unit)
@@ -134,5 +136,3 @@ def _inseparable(columns: SeriesColumns) -> tuple[tuple[str, str, float], ...]:
     pairs = [(columns.keys[i], columns.keys[j], float(cosine[i, j])) for i, j in zip(a, b, strict=True)]
     kept = [(str(x), str(y), c) for x, y, c in pairs if x.z != y.z and min(x.z, y.z) >= 11]
     return tuple(sorted(kept, key=lambda p: -p[2]))
-
-

@@ -105,7 +105,11 @@ def forward(
         z = scored.z / divide
         open_ = np.array([k not in keys and k not in rejected for k in pool])
         z = np.where(open_, z, -np.inf)
-        added = _pick(z, unit, variance, enter, lambda i: contradicted(ingredients, fit, pool[i], float(scored.amplitude[i])))
+
+        def vetoed(i: int, fit: Fit = fit, scored: Scores = scored) -> bool:
+            return contradicted(ingredients, fit, pool[i], float(scored.amplitude[i]))
+
+        added = _pick(z, unit, variance, enter, vetoed)
         if not added:
             break
         keys += [pool[i] for i in added]

@@ -58,9 +58,13 @@ def _rivalled(name: str, evidence: Evidence, close: list[Rival]) -> str:
 
 def _firm(name: str, evidence: Evidence, rare: bool) -> str:
     seen = [line for line in evidence.lines if line.observed > 3.0 * line.sigma and line.own > 0.2]
-    lines = _listed(tuple(f"{line_name(x.group)} ({x.energy_kev:.2f} keV)" for x in sorted(seen, key=lambda x: -x.observed)[:3]))
+    lines = _listed(
+        tuple(f"{line_name(x.group)} ({x.energy_kev:.2f} keV)" for x in sorted(seen, key=lambda x: -x.observed)[:3])
+    )
     where = f"at {lines}" if lines else "under its neighbours' lines"
-    text = f"Without {name} the fit loses {evidence.significance:.1f} sigma {where}; nothing else explains these counts."
+    text = (
+        f"Without {name} the fit loses {evidence.significance:.1f} sigma {where}; nothing else explains these counts."
+    )
     return text + (" It hardly ever occurs: check the sample's history." if rare else "")
 
 

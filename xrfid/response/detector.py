@@ -77,8 +77,10 @@ def escape_fraction(material: str, line: EscapeLine, energy_kev: NDArray[np.floa
     z_share = line.mass_fraction
     if z_share < 1.0:  # only photons absorbed by this element of the compound can make its line
         z = {"Cd": 48, "Te": 52}[line.name[:2]]
-        z_share = z_share * float(xraylib.CS_Photo(z, line.edge_kev * 1.1)) / float(
-            mass_attenuation(ELEMENTS[material], line.edge_kev * 1.1)[0]
+        z_share = (
+            z_share
+            * float(xraylib.CS_Photo(z, line.edge_kev * 1.1))
+            / float(mass_attenuation(ELEMENTS[material], line.edge_kev * 1.1)[0])
         )
     geometry = 1.0 - (mu_out / mu_in) * np.log1p(mu_in / mu_out)
     made = line.yield_ * (1.0 - 1.0 / line.jump) * line.share * z_share
@@ -160,9 +162,7 @@ def joined(*parts: DrawnLines) -> DrawnLines:
     )
 
 
-def draw(
-    lines: DrawnLines, shape: LineShape, edges_kev: NDArray[np.float64], n_columns: int
-) -> NDArray[np.float64]:
+def draw(lines: DrawnLines, shape: LineShape, edges_kev: NDArray[np.float64], n_columns: int) -> NDArray[np.float64]:
     """Draw lines with their full shape: core, tail and shelf.
 
     Parameters

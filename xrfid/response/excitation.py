@@ -188,4 +188,3 @@ def _fluorescence_yield(z: int, subshell: str) -> float:
         return float(xraylib.FluorYield(z, getattr(xraylib, f"{subshell}_SHELL")))
     except ValueError:
         return 0.0
-

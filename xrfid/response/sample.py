@@ -59,9 +59,7 @@ def sines(geometry: Geometry) -> tuple[float, float]:
     return math.sin(math.radians(geometry.incidence_deg)), math.sin(math.radians(geometry.takeoff_deg))
 
 
-def escape_depth(
-    a: NDArray[np.float64], b: NDArray[np.float64], g_cm2: float
-) -> NDArray[np.float64]:
+def escape_depth(a: NDArray[np.float64], b: NDArray[np.float64], g_cm2: float) -> NDArray[np.float64]:
     """Integral of ``exp(-(a + b) t) dt`` over the layer, shape (n_lines, n_energies).
 
     `a` (n_energies,) and `b` (n_lines,) are the attenuations along the way in and out, cm2/g.

@@ -12,9 +12,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xrfid.atoms.absorption import ALL_Z, attenuation_table, gas_transmission
-from xrfid.atoms.elements import symbol
+from xrfid.atoms.elements import ATOMIC_NUMBER, SYMBOLS, symbol
 from xrfid.atoms.ionisation import subshell_emission
 from xrfid.atoms.lines import GROUPS, LineTable, line_table
+from xrfid.errors import InputError, did_you_mean
 from xrfid.instrument import Instrument
 from xrfid.response.detector import efficiency
 from xrfid.response.excitation import Excitation, excitation
@@ -60,6 +61,9 @@ class Prediction:
     """
 
     def __init__(self, instrument: Instrument, end_kev: float | None = None) -> None:
+        for name in instrument.stray.elements:
+            if name not in ATOMIC_NUMBER:
+                raise InputError("stray.elements", f'"{name}" is no element symbol', did_you_mean(name, SYMBOLS))
         self.instrument = instrument
         self.source: Excitation = excitation(instrument, end_kev)
         self._sines = sines(instrument.geometry)
@@ -184,9 +188,7 @@ class Prediction:
             )
         raw = self._scatter(fractions)
         coherent, incoherent = self._scatter_recorded
-        return Scattered(
-            raw.coherent_kev, raw.coherent * coherent, raw.incoherent_kev, raw.incoherent * incoherent
-        )
+        return Scattered(raw.coherent_kev, raw.coherent * coherent, raw.incoherent_kev, raw.incoherent * incoherent)
 
     def recorded(self, energy_kev: NDArray[np.float64]) -> NDArray[np.float64]:
         """Share of photons leaving the sample towards the detector that is recorded."""
