@@ -58,8 +58,9 @@ def read(source: Path | io.BytesIO, dataset: str | None, name: str | None = None
                 return (_spectrum(called, _named(called, file, path), index, dataset),)
             found = _defaults(file) or _candidates(file)
             if not found:
-                raise InputError(called, f"holds no dataset of numbers with channels as its last axis{_instead(file)}",
-                                 f"at least {FEWEST_CHANNELS} and at most {MOST_CHANNELS} channels are needed")  # fmt: skip
+                nothing = f"holds no dataset of numbers with channels as its last axis{_instead(file)}"
+                needed = f"at least {FEWEST_CHANNELS} and at most {MOST_CHANNELS} channels are needed"
+                raise InputError(called, nothing, needed)
             several = len(found) > 1
             return tuple(_spectrum(called, file[p], None, p if several else None) for p in found)
     except InputError:
@@ -124,7 +125,7 @@ def _instead(file: h5py.File) -> str:
 
 
 def _holds_spectra(item: h5py.Dataset) -> bool:
-    shape = item.shape or ()
+    shape: tuple[int, ...] = item.shape or ()
     return item.dtype.kind in "iuf" and len(shape) >= 1 and FEWEST_CHANNELS <= shape[-1] <= MOST_CHANNELS
 
 
