@@ -11,29 +11,35 @@ from xrfid.spectrum import Spectrum
 
 
 def write(spectra: Sequence[Spectrum], path: Path) -> None:
-    """Write spectra side by side.
+    """Write spectra side by side; title and times go into lines that begin with ``#``.
 
     Raises
     ------
     OutputError
-        If they differ in length or energy scale.
+        If they differ in length or energy scale, or in their measuring times.
     """
     first = spectra[0]
     if any(s.n_channels != first.n_channels or s.scale != first.scale for s in spectra):
         raise OutputError(str(path), "spectra of different length or energy scale do not fit one table", "use .h5")
+    if any((s.live_time_s, s.real_time_s) != (first.live_time_s, first.real_time_s) for s in spectra):
+        raise OutputError(str(path), "spectra of different measuring times do not fit one table", "use .h5")
     with open(path, "w", newline="", encoding="utf-8") as handle:
-        if len(spectra) == 1:
-            for name, value in (("Title", first.title), ("Live time (s)", first.live_time_s),
-                                ("Real time (s)", first.real_time_s)):  # fmt: skip
-                if value:
-                    handle.write(f"# {name}: {' '.join(value.split()) if isinstance(value, str) else repr(value)}\n")
+        if len(spectra) == 1 and first.title.strip():
+            handle.write(f"# Title: {_flat(first.title)}\n")
+        for name, seconds in (("Live time (s)", first.live_time_s), ("Real time (s)", first.real_time_s)):
+            if seconds is not None:
+                handle.write(f"# {name}: {float(seconds)!r}\n")
         writer = csv.writer(handle, lineterminator="\n")
         axis = "channel" if first.scale is None else "energy (keV)"
-        names = [s.dataset or s.title or f"spectrum {i}" for i, s in enumerate(spectra, start=1)]
+        names = [_flat(s.dataset or s.title) or f"spectrum {i}" for i, s in enumerate(spectra, start=1)]
         writer.writerow([axis, *(["counts"] if len(spectra) == 1 else names)])
         x = range(first.n_channels) if first.scale is None else map(float, first.energy_kev)
         for value, *counts in zip(x, *(s.counts for s in spectra), strict=True):
             writer.writerow([repr(value), *(_count(c) for c in counts)])
+
+
+def _flat(text: str) -> str:
+    return " ".join(text.split())
 
 
 def _count(value: float) -> str:
