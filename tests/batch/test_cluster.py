@@ -13,12 +13,12 @@ import numpy as np
 import pytest
 import simulated
 
-from xrfid.batch.cluster import Cluster
+from xrfid.batch.cluster import Cluster, _result
 from xrfid.batch.plan import Plan
 from xrfid.batch.stack import Place, Stack
 from xrfid.batch.store import Part, create_part
 from xrfid.batch.work import Threads, fit_blocks
-from xrfid.errors import InputError
+from xrfid.errors import InputError, XrfidError
 
 distributed = pytest.importorskip("distributed")
 
@@ -72,3 +72,12 @@ def test_a_missing_extra_names_itself(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setitem(__import__("sys").modules, "distributed", None)
     with pytest.raises(InputError, match=r"pip install 'xrfid\[cluster\]'"):
         Cluster(Place("run.h5"), "tcp://127.0.0.1:9")
+
+
+def test_a_block_that_kills_every_worker_is_said() -> None:
+    class Doomed:
+        def result(self) -> None:
+            raise distributed.KilledWorker("fit", None, 3)
+
+    with pytest.raises(XrfidError, match="block 7 could not be fitted by the cluster"):
+        _result(Doomed(), 7)

@@ -134,6 +134,28 @@ def test_only_the_elements_asked_for_are_fitted(small: Path, tmp_path: Path) -> 
     assert {s.split()[0] for s in summary.series} <= {"Fe", "Ca", "Pb", "Ar"}
 
 
+def test_points_that_fit_badly_are_listed_and_fitted_singly(small: Path, tmp_path: Path) -> None:
+    """Without manganese, zinc and the rest in the fit, the points that hold much of them deviate."""
+    summary = quick(small, tmp_path / "out.h5")
+    assert summary.badly_fitted > 10
+    with h5py.File(tmp_path / "out.h5") as file, Stack(Place(str(small))) as stack:
+        table = file["entry/fit/refitted"]
+        index = tuple(int(i) for i in table["index"][0])
+        assert table.attrs["badly_fitted_points"] == summary.badly_fitted
+        assert 10 < len(table["index"]) <= 100
+        assert file["entry/fit/reduced_chi2"][index] == table["reduced_chi2_before"][0] > 1.2
+        area, sigma = (file[f"entry/series/Fe_K/{kind}"][index] for kind in ("area", "sigma"))
+        settings = restricted(Settings(), ("Fe", "Ca", "Pb"))
+        summed = sum_spectrum(stack, file["entry/sum_spectrum/counts"][()], "sum of points")
+        work = search(summed, simulated.INSTRUMENT, settings)
+        with h5py.File(small) as run_file:
+            counts = run_file["entry/data/counts"][index].astype(float)
+        single = fit_point(work, work.fit.keys, counts)
+        key = next(k for k in work.fit.keys if str(k) == "Fe K")
+        assert area == pytest.approx(single.areas[key], rel=1e-4)
+        assert sigma == pytest.approx(single.sigmas[key], rel=1e-3)
+
+
 def test_a_compressed_result_holds_the_same(small: Path, tmp_path: Path) -> None:
     quick(small, tmp_path / "plain.h5")
     quick(small, tmp_path / "packed.h5", compress=True)

@@ -17,7 +17,7 @@ from scipy.stats import norm
 from xrfid.batch.engine import GOOD, add_up
 from xrfid.batch.stack import Stack
 from xrfid.batch.work import Progress
-from xrfid.errors import InputError, Untrustworthy
+from xrfid.errors import Untrustworthy
 from xrfid.identify.assemble import assemble
 from xrfid.identify.pipeline import search
 from xrfid.identify.settings import Settings
@@ -53,21 +53,13 @@ def sampled_blocks(stack: Stack) -> NDArray[np.int64]:
 
 
 def sample_sum(stack: Stack, blocks: NDArray[np.int64], progress: Progress) -> tuple[NDArray[np.float64], int]:
-    """Add up the good spectra of some blocks; return the sum, shape (n_channels,), and how many they are.
-
-    Raises
-    ------
-    InputError
-        If there is no count in any of them.
-    """
+    """Add up the good spectra of some blocks; return the sum, shape (n_channels,), and how many they are."""
     summed, n = np.zeros(stack.n_channels), 0
     for i, block in enumerate(blocks):
         layers, lost = stack.read(int(block))
         part, good = add_up(layers, lost, stack.signed)
         summed, n = summed + part, n + good
         progress("looking at a sample", i + 1, len(blocks))
-    if not summed.any():
-        raise InputError(f"{stack.place.path}:{stack.names[0]}", "holds no counts that can be used", "is this the run?")
     return summed, n
 
 

@@ -21,6 +21,7 @@ class Refits:
     points : ndarray of int, shape (n,)
         Indices among all points.
     area, sigma : ndarray, shape (n_series, n)
+        `sigma` is NaN where an area stands at zero, for then the shared fit's uncertainty remains.
     before, after : ndarray, shape (n,)
         Reduced chi-square of the shared fit; reduced deviance of the single one.
     listed : int
@@ -62,6 +63,6 @@ def refit(work: Work, keys: tuple[SeriesKey, ...], points: NDArray[np.int64], sp
     for i, counts in enumerate(spectra):
         fit = fit_point(work, keys, counts)
         area[:, i] = [fit.areas[k] for k in keys]
-        sigma[:, i] = [fit.sigmas[k] for k in keys]
+        sigma[:, i] = [fit.sigmas[k] or np.nan for k in keys]
         after[i] = fit.solution.deviance / max(fit.model.size - int(fit.solution.free.sum()), 1)
     return Refits(points, area, sigma, chi2, after, listed)

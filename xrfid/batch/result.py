@@ -111,7 +111,8 @@ def _replacing(points: NDArray[np.int64], values: NDArray[np.float32]) -> Edit:
 
     def edit(slab: NDArray[Any], first: int) -> None:
         inside = (points >= first) & (points < first + slab.size)
-        slab.reshape(-1)[points[inside] - first] = values[inside]
+        flat, at = slab.reshape(-1), points[inside] - first
+        flat[at] = np.where(np.isnan(values[inside]), flat[at], values[inside])
 
     return edit
 

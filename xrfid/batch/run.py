@@ -108,36 +108,28 @@ def run(
         Result file; while it is unfinished, ``<out>.part`` lies beside it.
     document : callable
         Turns the identification of the sum into its JSON document (`xrfid.report.document.to_json`).
-    instrument : Instrument, optional
+    instrument, settings : Instrument, Settings, optional
+        For the identifications.
     dataset : str, optional
         HDF5 path of the ``(..., channels)`` counts; ``"a,b"`` sums several.
     detectors : tuple of int, or "all", optional
         Indices on the first axis to be summed, if that axis counts detectors.
     elements : tuple of str
         Fit exactly these; found if not given.
-    settings : Settings, optional
-        For the identifications.
     workers : int, optional
         Threads; all cores if not given.
     scheduler : str, optional
         Address of a Dask scheduler whose workers see the same files.
     compress : bool
-        Compress the result.
     overwrite : bool
         Replace a result that exists, or an unfinished one of another input or other settings.
     progress : callable, optional
         Told what is being done, how much of it, and of how much.
 
-    Returns
-    -------
-    Summary
-
     Raises
     ------
-    InputError
-        If the input cannot be read or makes no sense.
-    OutputError
-        If the result cannot be written, exists, or an unfinished one belongs to something else.
+    InputError, OutputError
+        If the input makes no sense, or the result exists, cannot be written, or is of something else.
     Untrustworthy
         If the summed spectrum does not allow a trustworthy answer.
     """
@@ -227,6 +219,11 @@ class _Job:
         """Look at a sample, decide what to fit, and lay out the result."""
         blocks = sampled_blocks(self.stack)
         summed, n = sample_sum(self.stack, blocks, self.progress)
+        if not summed.any():  # dark where we looked
+            summed, n = sample_sum(self.stack, np.arange(self.stack.n_blocks), self.progress)
+        if not summed.any():
+            source = f"{self.stack.place.path}:{self.stack.names[0]}"
+            raise InputError(source, "holds no counts that can be used", "is this the run?")
         work = self._search(summed)
         stage = _SAMPLED if self.looks_further else _FINAL
         return self._lay_out(make_plan(work, n), stage, ())
