@@ -7,7 +7,7 @@ import shutil
 import time
 
 import pytest
-from conftest import build
+from steel import build
 
 from xrfid.report.page import render_page
 
