@@ -127,7 +127,8 @@ def bounded_solve(
 ) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
     """Minimise ``x G x / 2 - t x`` with ``x >= 0`` where `bounded`.
 
-    Active-set method after Lawson & Hanson (1974), started from the set `free`.
+    Active-set method of Lawson & Hanson, Solving Least Squares Problems (1974), chapter 23, started
+    from the set `free`.
 
     Returns
     -------
@@ -138,46 +139,57 @@ def bounded_solve(
     scale = 1.0 / np.sqrt(np.maximum(np.diag(gram), 1e-300))
     g = gram * scale[:, None] * scale
     t = target * scale
-    free = free.copy()
-    x = np.zeros(t.size)
-    for _ in range(3 * t.size):
-        x = np.zeros(t.size)
-        index = np.flatnonzero(free)
-        x[index] = _spd_solve(g[np.ix_(index, index)], t[index])
-        negative = free & bounded & (x < 0)
-        if negative.any():
-            free &= ~negative
-            continue
+    x, free = _feasible(g, t, bounded, free | ~bounded)
+    stuck = np.zeros(t.size, dtype=bool)
+    for _ in range(5 * t.size):
         push = t - g @ x
-        wants = bounded & ~free & (push > 1e-7)
+        wants = bounded & ~free & ~stuck & (push > 1e-7)
         if not wants.any():
             break
-        free[np.argmax(np.where(wants, push, -np.inf))] = True
-        trial = np.zeros(t.size)
-        index = np.flatnonzero(free)
-        trial[index] = _spd_solve(g[np.ix_(index, index)], t[index])
-        if (free & bounded & (trial < 0)).any():  # releasing one drives another negative: step only to the bound
-            x, free = _step_to_bound(x, trial, free, bounded, g, t)
-            break
+        released = int(np.argmax(np.where(wants, push, -np.inf)))
+        free[released] = True
+        x, free = _step_to_bound(x, free, bounded, g, t)
+        if free[released]:
+            stuck[:] = False
+        else:  # its push was rounding noise
+            stuck[released] = True
     return x * scale, free
 
 
+def _feasible(
+    g: NDArray[np.float64], t: NDArray[np.float64], bounded: NDArray[np.bool_], free: NDArray[np.bool_]
+) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:
+    """Fix all that turn out negative, and repeat, until nothing bounded is negative."""
+    while True:
+        x = _restricted(g, t, free)
+        negative = free & bounded & (x < 0)
+        if not negative.any():
+            return x, free
+        free = free & ~negative
+
+
 def _step_to_bound(
-    x: NDArray[np.float64], trial: NDArray[np.float64], free: NDArray[np.bool_], bounded: NDArray[np.bool_],
-    g: NDArray[np.float64], t: NDArray[np.float64],
+    x: NDArray[np.float64], free: NDArray[np.bool_], bounded: NDArray[np.bool_], g: NDArray[np.float64],
+    t: NDArray[np.float64],
 ) -> tuple[NDArray[np.float64], NDArray[np.bool_]]:  # fmt: skip
-    """Lawson & Hanson's inner loop: move towards `trial` until the first bound, fix it, and repeat."""
-    for _ in range(t.size):
+    """Lawson & Hanson's inner loop: move towards the minimum of the free until a bound is met, fix it, and repeat."""
+    while True:
+        trial = _restricted(g, t, free)
         hit = free & bounded & (trial < 0)
         if not hit.any():
             return trial, free
-        alpha = np.min(x[hit] / np.maximum(x[hit] - trial[hit], 1e-300))
-        x = x + alpha * (trial - x)
-        free = free & ~(bounded & (x <= 1e-12) & hit)
-        index = np.flatnonzero(free)
-        trial = np.zeros(t.size)
-        trial[index] = _spd_solve(g[np.ix_(index, index)], t[index])
-    return np.where(bounded, np.maximum(trial, 0.0), trial), free
+        step = np.where(hit, x / np.maximum(x - trial, 1e-300), np.inf)
+        x = x + float(step.min()) * (trial - x)
+        free = free & ~(hit & ((step <= step.min()) | (x <= 1e-12)))
+        x = np.where(free, x, 0.0)
+
+
+def _restricted(g: NDArray[np.float64], t: NDArray[np.float64], free: NDArray[np.bool_]) -> NDArray[np.float64]:
+    """Minimum with everything that is not free at 0."""
+    x = np.zeros(t.size)
+    index = np.flatnonzero(free)
+    x[index] = _spd_solve(g[np.ix_(index, index)], t[index])
+    return x
 
 
 def _spd_solve(g: NDArray[np.float64], t: NDArray[np.float64]) -> NDArray[np.float64]:
