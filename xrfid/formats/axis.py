@@ -15,6 +15,9 @@ _CHANNEL_WORD = re.compile(r"chan|^ch\b|^n$|^i$|index|kanal|bin", re.I)
 _EV_WORD = re.compile(r"(?<![km])ev\b", re.I)
 
 
+_LARGEST = 1e9
+
+
 @dataclass(frozen=True)
 class Axis:
     """What a column of rising numbers is: channel numbers, or energies with their scale."""
@@ -34,8 +37,10 @@ def axis_of(values: NDArray[np.float64], name: str = "") -> Axis | None:
     name : str
         The column's heading, if it has one.
     """
-    clean = values[np.isfinite(values)]
-    if clean.size < 8 or np.any(np.diff(clean) < 0) or clean[-1] <= clean[0]:
+    finite = np.flatnonzero(np.isfinite(values))
+    clean = values[: finite[-1] + 1] if finite.size else values[:0]
+    # a gap or an absurd value within is no axis; a shorter column may end in NaN
+    if clean.size < 8 or not np.all(np.abs(clean) < _LARGEST) or np.any(np.diff(clean) < 0) or clean[-1] <= clean[0]:
         return None
     index = np.arange(clean.size)
     gain, offset = np.polyfit(index, clean, 1)
@@ -82,7 +87,7 @@ def _energy_axis(values: NDArray[np.float64], name: str, grid: float) -> Axis:
 def fitted_scale(points: NDArray[np.float64]) -> EnergyScale | None:
     """Straight line through (channel, energy) pairs, shape (n, 2); energies in keV or eV by size."""
     channel, energy = points[:, 0], points[:, 1]
-    if np.ptp(channel) <= 0 or np.ptp(energy) <= 0:
+    if not np.all(np.abs(points) < _LARGEST) or np.ptp(channel) <= 0 or np.ptp(energy) <= 0:
         return None
     gain, offset = np.polyfit(channel, energy, 1)
     factor = 1e-3 if energy.max() > 1000.0 else 1.0

@@ -6,8 +6,9 @@ calibration, channel, keV, ...), never from who made it.
 
 from __future__ import annotations
 
+import math
 import re
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -21,15 +22,28 @@ from xrfid.spectrum import EnergyScale, Spectrum
 _NUMBER = r"[+-]?(?:\d+(?:\.\d*)?|\.\d+)(?:[eE][+-]?\d+)?"
 _IS_NUMBER = re.compile(rf"^{_NUMBER}$")
 _COMMA_NUMBER = re.compile(r"^[+-]?\d+,\d+(?:[eE][+-]?\d+)?$")
-_STATEMENT = re.compile(r"^\W*([A-Za-z_µ%#/(). \-]*?[A-Za-z_)%.])\s*(?:[:=]|\s-\s|\t|,|;|\s{2,}|\s)\s*(.+?)\W*$")
+_KEY = r"\W*([^\W\d][^\d,;:=\t]*?)"
+_STATEMENTS = (
+    # the first of the separators that stand for themselves, else a gap, else the blank before a number, else a blank
+    re.compile(rf"^{_KEY}\s*(?:[:=;,\t]|\s-\s)\s*(\S.*)$"),
+    re.compile(rf"^{_KEY}\s{{2,}}(\S.*)$"),
+    re.compile(rf"^{_KEY}\s+(?={_NUMBER})(.*)$"),
+    re.compile(rf"^{_KEY}\s+(\S.*)$"),
+)
+_LONGEST_STATEMENT = 400
 _MARK = re.compile(
     r"^\s*(?:<<\s*(.+?)\s*>>|\[\s*(.+?)\s*\]|\$\s*([A-Za-z_ ]+?)\s*:?|[*=-]{3,}\s*(.*?)\s*[*=-]{3,})\s*$"
 )
+_GAIN = r"gain|slope|per chan|channel width|xperchan|steigung"
 _CALIBRATION = re.compile(r"calib|energ", re.I)
 _END = re.compile(r"\bend\b|^/", re.I)
-_LIVE = re.compile(r"live|lebend|lifetime|\blt\b", re.I)
-_REAL = re.compile(r"real|true|elapsed|clock|\brt\b", re.I)
+_LIVE = re.compile(r"(?<![a-z])(live|lebend|lifetime)|\blt\b", re.I)
+_REAL = re.compile(r"(?<![a-z])(real|echtz|true|elapsed|clock)|\brt\b", re.I)
 _MILLI = re.compile(r"\bms\b|millisec", re.I)
+_MICRO = re.compile(r"(?<![a-z])[uµμ]a\b|microamp", re.I)
+_NO_SPECTRUM = re.compile(
+    r"(?<![a-z])(err(or)?s?|sigma|uncert[a-z]*|backgr[a-z]*|fit|resid[a-z]*|rate|cps|std)(?![a-z])", re.I
+)
 
 
 @dataclass
@@ -40,6 +54,7 @@ class _Block:
     section: str
     header: list[str]
     rows: list[list[float]] = field(default_factory=list)
+    lines: list[int] = field(default_factory=list)
 
 
 @dataclass
@@ -61,17 +76,16 @@ def read(name: str, text: str) -> tuple[Spectrum, ...]:
     block = max(contents.blocks, key=lambda b: len(b.rows), default=None)
     if block is None or len(block.rows) * len(block.rows[0]) < FEWEST_CHANNELS:
         found = 0 if block is None else len(block.rows) * len(block.rows[0])
-        raise InputError(name, f"the longest run of numbers holds {found}, too few for a spectrum",
-                         f"at least {FEWEST_CHANNELS} channels are needed; a layout file can say where they are")  # fmt: skip
-    table = _rectangular(block.rows)
+        remedy = f"at least {FEWEST_CHANNELS} channels are needed; a layout file can say where they are"
+        raise InputError(name, f"the longest run of numbers holds {found}, too few for a spectrum", remedy)
+    table = np.array(block.rows, dtype=float)
     scale_from_points, said = _calibration(contents, block)
     live, real = _times(contents.statements)
     facts = _facts(contents.statements)
     spectra = []
-    for column in _columns(name, table, block.header):
-        counts, more = checked_counts(
-            f"{name}, column {column.number}", column.counts, f"line {block.first_line} + row"
-        )
+    for column in _columns(table, block.header):
+        place = _place(name, block, column)
+        counts, more = checked_counts(place, column.counts)
         notes = [*said, *column.said, *more]
         scale = column.scale
         if scale is None and scale_from_points is not None:
@@ -108,10 +122,12 @@ def _parse(text: str) -> _Contents:
             closing = current is not None and abs(len(current.rows[0]) - len(numbers)) > 0 and len(current.rows) > 20
             if closing and current is not None and len(numbers) < len(current.rows[0]):
                 current.rows.append(numbers + [float("nan")] * (len(current.rows[0]) - len(numbers)))
+                current.lines.append(number)
                 continue
             current = _Block(number, section, _cells(header))
             out.blocks.append(current)
         current.rows.append(numbers)
+        current.lines.append(number)
     return out
 
 
@@ -150,24 +166,42 @@ def _all_numbers(line: str, decimal_comma: bool) -> list[float] | None:
 def _note_statement(out: _Contents, line: str) -> None:
     body = line.strip().lstrip("#%*!;/'\"").strip()
     out.first_text = out.first_text or body
-    match = _STATEMENT.match(body)
+    if len(body) > _LONGEST_STATEMENT:
+        return
+    match = next((m for m in (pattern.match(body) for pattern in _STATEMENTS) if m), None)
     if match:
-        out.statements.setdefault(" ".join(match.group(1).lower().split()), match.group(2).strip().strip('"'))
+        key = " ".join(match.group(1).lower().split())
+        out.statements.setdefault(key, match.group(2).strip().strip(";,").strip('"'))
 
 
 def _cells(header: str) -> list[str]:
+    """The cells of a heading; what stands between quotation marks is one cell."""
     body = header.strip().lstrip("#%*!").strip()
-    separator = next((s for s in ("\t", ";", ",") if s in body), None)
-    cells = body.split(separator) if separator else body.split()
-    return [c.strip().strip('"') for c in cells]
+    parts = body.split('"')
+    if len(parts) % 2 == 0:  # marks that do not pair, as in 2" pipe
+        parts = [body]
+    separator = next((s for s in ("\t", ";", ",") if any(s in part for part in parts[::2])), None)
+    if separator is None:
+        return body.split() if len(parts) == 1 else [c.strip() for c in parts if c.strip()]
+    parts[1::2] = [part.replace(separator, "\x00") for part in parts[1::2]]
+    cells = [c.strip().replace("\x00", separator) for c in '"'.join(parts).split(separator)]
+    return [c[1:-1].replace('""', '"') if len(c) > 1 and c[0] == c[-1] == '"' else c for c in cells]
 
 
-def _rectangular(rows: list[list[float]]) -> NDArray[np.float64]:
-    return np.array(rows, dtype=float)
+def _place(name: str, block: _Block, column: _Column) -> str:
+    """Where the first count that is no count stands, for the complaint about it; else the column."""
+    bad = np.flatnonzero(~(np.isfinite(column.counts) & (column.counts >= 0)))
+    if not bad.size:
+        return name if column.number == 0 else f"{name}, column {column.number}"
+    if column.number == 0:
+        return f"{name}, line {block.lines[bad[0] // len(block.rows[0])]}"
+    return f"{name}, line {block.lines[bad[0]]}, column {column.number}"
 
 
 @dataclass(frozen=True)
 class _Column:
+    """A column of counts; number 0 is the whole table read row by row."""
+
     number: int
     name: str
     counts: NDArray[np.float64]
@@ -175,44 +209,44 @@ class _Column:
     said: tuple[str, ...]
 
 
-def _columns(name: str, table: NDArray[np.float64], header: list[str]) -> list[_Column]:
+def _columns(table: NDArray[np.float64], header: list[str]) -> list[_Column]:
     """Decide which columns are axes and which are counts."""
     n, width = table.shape
     names = header if len(header) == width else [""] * width
     if width == 1:
         return [_Column(1, "", table[:, 0], None, ())]
     axes = [axis_of(table[:, i], names[i]) for i in range(width)]
-    if (
-        width >= 4
-        and width % 2 == 0
-        and all(axes[i] is not None for i in range(0, width, 2))
-        and not any(
-            axes[i] is not None and axes[i].certain
-            for i in range(1, width, 2)  # type: ignore[union-attr]
-        )
-    ):
+    paired = width >= 4 and width % 2 == 0 and all(axes[::2])
+    if paired and not any(axis is not None and axis.certain for axis in axes[1::2]):
         return [_column(i + 2, names[i + 1], table[:, i + 1], axes[i]) for i in range(0, width, 2)]
     leading = [i for i in range(min(2, width - 1)) if axes[i] is not None]
     if not leading and width > 4 and n * width >= FEWEST_CHANNELS and not any(names):
-        return [_Column(1, "", table.ravel()[~np.isnan(table.ravel())], None, ("counts are read row by row",))]
-    energy = next((axes[i] for i in reversed(leading) if axes[i] is not None and not axes[i].is_channel), None)  # type: ignore[union-attr]
-    energy = energy or next((axes[i] for i in leading), None)
+        return [_Column(0, "", _without_padding(table.ravel()), None, ("counts are read row by row",))]
+    there = [axis for axis in (axes[i] for i in leading) if axis is not None]
+    energy = next((axis for axis in reversed(there) if not axis.is_channel), there[0] if there else None)
     found = [_column(i + 1, names[i], table[:, i], energy) for i in range(width) if i not in leading]
-    return [c for c in found if not _is_error_or_rate(c, found)]
+    return _spectra_among(found)
 
 
 def _column(number: int, name: str, counts: NDArray[np.float64], axis: Axis | None) -> _Column:
-    keep = ~np.isnan(counts)
-    trailing = counts[: int(np.flatnonzero(keep)[-1]) + 1] if keep.any() else counts
-    if axis is None:
-        return _Column(number, name, trailing, None, ())
-    return _Column(number, name, trailing, axis.scale, axis.said)
+    scale, said = (None, ()) if axis is None else (axis.scale, axis.said)
+    return _Column(number, name, _without_padding(counts), scale, said)
 
 
-def _is_error_or_rate(column: _Column, all_columns: list[_Column]) -> bool:
-    """Columns of uncertainties, backgrounds or fits beside counts are no spectra."""
-    words = re.compile(r"err|sigma|uncert|backgr|\bfit\b|resid|rate|cps|\bstd\b", re.I)
-    return len(all_columns) > 1 and bool(words.search(column.name))
+def _without_padding(counts: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Without the NaN at the end that fill up a last line or a shorter column."""
+    kept = np.flatnonzero(~np.isnan(counts))
+    return counts[: int(kept[-1]) + 1] if kept.size else counts
+
+
+def _spectra_among(columns: list[_Column]) -> list[_Column]:
+    """Leave out columns headed as uncertainties, backgrounds or fits if others remain, and say so."""
+    kept = [c for c in columns if not _NO_SPECTRUM.search(c.name)]
+    if not kept or len(kept) == len(columns):
+        return columns
+    names = ", ".join(f'"{c.name}"' for c in columns if c not in kept)
+    note = f"columns headed {names} are taken as no counts and left out"
+    return [replace(c, said=(*c.said, note)) for c in kept]
 
 
 def _calibration(contents: _Contents, spectrum: _Block) -> tuple[EnergyScale | None, list[str]]:
@@ -226,16 +260,24 @@ def _calibration(contents: _Contents, spectrum: _Block) -> tuple[EnergyScale | N
                 return scale, [f"energy scale from {len(block.rows)} calibration points of the file"]
         if _CALIBRATION.search(block.section) and len(block.rows) == 1 and len(block.rows[0]) in (2, 3):
             first, second, *rest = block.rows[0]
-            if 5e-4 < second < 0.5:
-                quadratic = rest[0] if rest else 0.0
+            quadratic = rest[0] if rest else 0.0
+            if 5e-4 < second < 0.5 and math.isfinite(first) and math.isfinite(quadratic):
                 return EnergyScale(first, second, quadratic), ["energy scale from the coefficients of the file"]
-    gain = _first_number(contents.statements, r"gain|slope|per chan|channel width|xperchan|steigung")
-    offset = _first_number(contents.statements, r"offset|intercept|zero")
-    if gain is not None and gain > 0:
-        factor = 1e-3 if gain > 0.5 else 1.0
-        said = ["energy scale from the gain and offset stated in the file"]
-        return EnergyScale((offset or 0.0) * (factor if abs(offset or 0.0) > 2 else 1.0), gain * factor), said
-    return None, []
+    return _stated_scale(contents.statements)
+
+
+def _stated_scale(statements: dict[str, str]) -> tuple[EnergyScale | None, list[str]]:
+    """Energy scale from a gain and an offset; a gain above 0.5 without eV beside it is the amplifier's."""
+    gain = _first_number(statements, _GAIN)
+    if gain is None or not 5e-4 < gain < 500.0:
+        return None, []
+    in_ev = any(re.search(_GAIN, k) and re.search(r"(?<![km])ev", f"{k} {v}".lower()) for k, v in statements.items())
+    if gain > 0.5 and not in_ev:
+        return None, []
+    offset = _first_number(statements, r"offset|intercept|zero") or 0.0
+    factor = 1e-3 if gain > 0.5 else 1.0
+    said = ["energy scale from the gain and offset stated in the file"]
+    return EnergyScale(offset * (factor if abs(offset) > 2 else 1.0), gain * factor), said
 
 
 def _first_number(statements: dict[str, str], pattern: str) -> float | None:
@@ -266,6 +308,8 @@ def _facts(statements: dict[str, str]) -> dict[str, Any]:
         value = _first_number(statements, pattern)
         if value is not None and 0 < value < 500:
             out[what] = value
+    if "current_ma" in out and any("current" in k and _MICRO.search(f"{k} {v}") for k, v in statements.items()):
+        out["current_ma"] *= 1e-3
     return out | {"statements": dict(statements)}
 
 
@@ -284,8 +328,6 @@ def _overflow(counts: NDArray[np.float64]) -> bool:
 
 def _named_apart(spectra: list[Spectrum]) -> list[Spectrum]:
     """Give every spectrum of a file a name of its own."""
-    from dataclasses import replace
-
     if len(spectra) == 1:
         return [replace(spectra[0], dataset=None)]
     taken: set[str] = set()
