@@ -12,6 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from xrfid.prepare.end_point import end_cost, stop_channel
 from xrfid.prepare.patterns import Patterns
 from xrfid.prepare.peaks import CHANNEL_VARIANCE, Peak, Widths, refit
 from xrfid.prepare.reduced import BINS_PER_FWHM, reduce
@@ -23,6 +24,8 @@ PLAUSIBLE_GAIN_KEV = (0.001, 0.2)
 _LEAST_Z = 8.0
 _MOST_PEAKS = 10
 _FITTED = 4
+MOST_END_COST = 15.0
+"""A spectrum that stops where the voltage does not explain it is looked into."""
 MOST_SHIFT_KEV = 0.009
 """Larger shifts are looked into; smaller ones are the fit's own business."""
 ENOUGH_COVERED = 0.58
@@ -40,6 +43,8 @@ class Look:
     """Median distance of the strongest peaks from their lines, keV."""
     second_kev: float
     """Second smallest distance among the strongest peaks: on a right scale two of them lie on their lines."""
+    end_cost: float
+    """What the place where the spectrum stops costs on this scale, in deviance."""
     noise_kev: float | None
     """Electronic FWHM that the strongest peaks show, keV; None if they are no cleaner than the Fano limit."""
 
@@ -47,11 +52,11 @@ class Look:
     def agrees(self) -> bool:
         """Whether nothing speaks against the scale."""
         near = max(abs(self.shift_kev), self.second_kev) < MOST_SHIFT_KEV
-        return self.peaks < 2 or (self.covered > ENOUGH_COVERED and near)
+        return self.peaks < 2 or (self.covered > ENOUGH_COVERED and near and self.end_cost < MOST_END_COST)
 
 
 def look(counts: NDArray[np.float64], scale: EnergyScale, resolution: Resolution, patterns: Patterns,
-         escape_kev: float) -> Look:  # fmt: skip
+         escape_kev: float, end_kev: float | None) -> Look:  # fmt: skip
     """Compare a stated scale with the peaks."""
     resolution = _as_wide_as_the_tallest(counts, scale, resolution)
     widths = widths_on(scale, resolution)
@@ -60,14 +65,16 @@ def look(counts: NDArray[np.float64], scale: EnergyScale, resolution: Resolution
     fits = [refit(counts, p) for p in peaks[:_FITTED]]
     peaks = [f if f.area > 0 else p for f, p in zip(fits, peaks, strict=False)] + peaks[_FITTED:]
     if len(peaks) < 2:
-        return Look(len(peaks), 1.0, 0.0, 0.0, None)
+        return Look(len(peaks), 1.0, 0.0, 0.0, 0.0, None)
     covered, value, energy = Sieve(reduced, patterns, peaks, escape_kev).one(scale, 0.35)
     at = np.array([p.channel for p in peaks])[: value.size]
     sure = np.flatnonzero(value[:_FITTED] > 0.4)
     shift = float(np.median(energy[sure] - scale.energy_kev(at[sure]))) if sure.size else 0.0
     away = np.where(value[:_FITTED] > 0, np.abs(energy[:_FITTED] - scale.energy_kev(at[:_FITTED])), 1.0)
+    stop, visible = stop_channel(counts)
+    cost = float(end_cost(scale.energy_kev(stop), visible, end_kev))
     noise = _noise([f for f in fits if f.area > 0], scale, resolution)
-    return Look(len(peaks), covered, shift, float(np.sort(away)[1]), noise)
+    return Look(len(peaks), covered, shift, float(np.sort(away)[1]), cost, noise)
 
 
 def _as_wide_as_the_tallest(counts: NDArray[np.float64], scale: EnergyScale, resolution: Resolution) -> Resolution:
@@ -83,19 +90,19 @@ def _as_wide_as_the_tallest(counts: NDArray[np.float64], scale: EnergyScale, res
         return resolution
     seen = 2.0 * min(top - float(left[-1]), float(right[0])) * scale.gain_kev
     usual = float(resolution.fwhm_kev(max(float(scale.energy_kev(top)), 0.5)))
-    if not 1.4 * usual < seen < 1.0:
+    if not 1.25 * usual < seen < 1.0:
         return resolution
     noise = math.sqrt((resolution.noise_ev * 1e-3) ** 2 + seen**2 - usual**2)
     return Resolution(noise * 1e3, resolution.fano, resolution.pair_energy_ev)
 
 
 def _noise(peaks: list[Peak], scale: EnergyScale, resolution: Resolution) -> float | None:
-    """Electronic FWHM of the narrower of the strongest peaks (blends are wider, never narrower)."""
+    """Median electronic FWHM of the three strongest peaks."""
     slope = FWHM_PER_SIGMA**2 * resolution.fano * resolution.pair_energy_ev * 1e-3
     g2 = scale.gain_kev**2
     square = [(p.fwhm**2 - CHANNEL_VARIANCE) * g2 - slope * float(scale.energy_kev(p.channel)) for p in peaks]
-    positive = sorted(s for s in square if s > 0)
-    return float(np.sqrt(positive[len(positive) // 3])) if positive else None
+    positive = [s for s in square if s > 0]
+    return float(np.sqrt(np.median(positive[:3]))) if positive else None
 
 
 def widths_on(scale: EnergyScale, resolution: Resolution) -> Widths:

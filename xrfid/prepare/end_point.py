@@ -8,6 +8,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from xrfid.response.scatter import ELECTRON_REST_KEV
 from xrfid.spectrum import EnergyScale
 
 _STEP_KEV = 0.5
@@ -41,6 +42,8 @@ def end_point(counts: NDArray[np.float64], scale: EnergyScale) -> float:
     filled = np.flatnonzero(above > max(3.0, 1e-4 * float(level.sum())))
     highest = float(edges[filled[-1] + 1]) if filled.size else _LOWEST_KEV
     best, clearest = 1.05 * highest, _CLEAR
+    if not stop_channel(counts)[1]:  # the recorded range ends before the continuum does
+        return float(np.clip(best, _LOWEST_KEV, _HIGHEST_KEV))
     for k in range(2 * _SIDE, level.size - 2):
         if above[k] >= _BEYOND * float(level.sum()):
             continue
@@ -50,7 +53,9 @@ def end_point(counts: NDArray[np.float64], scale: EnergyScale) -> float:
             continue
         gain = _poisson_step(below, beyond)
         if gain > clearest:
-            best, clearest = float(edges[k]), gain
+            # between the edge of coherent scatter and that of incoherent scatter through 90 degrees
+            edge = float(edges[k])
+            best, clearest = edge / (1.0 - 0.5 * edge / ELECTRON_REST_KEV), gain
     return float(np.clip(best, _LOWEST_KEV, _HIGHEST_KEV))
 
 

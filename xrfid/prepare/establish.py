@@ -115,7 +115,7 @@ def _checked(spectrum: Spectrum, scale: EnergyScale, origin: str, instrument: In
     known = instrument.tube is not None and "anode" in instrument.tube.model_fields_set
     patterns = patterns_of(instrument, end, known)
     escape = max(escape_lines(instrument.detector.material), key=lambda line: line.share * line.yield_)
-    seen = look(spectrum.counts, stated.usable, instrument.detector.resolution, patterns, escape.loss_kev)
+    seen = look(spectrum.counts, stated.usable, instrument.detector.resolution, patterns, escape.loss_kev, end)
     if not seen.agrees:
         other = instrument.energy_scale
         if origin == "file" and other is not None:

@@ -214,7 +214,10 @@ def _few_counts(sums: NDArray[np.float64], i: int, fwhm: float) -> float:
 
 def refit(counts: NDArray[np.float64], peak: Peak) -> Peak:
     """Return a peak with position, area and width from a fit; area 0 if it does not hold."""
-    return _fitted(counts, peak.channel, peak.fwhm, peak.significance)
+    first = _fitted(counts, peak.channel, peak.fwhm, peak.significance)
+    if first.area > 0 and first.fwhm > 1.15 * peak.fwhm:  # the window was too narrow
+        return _fitted(counts, first.channel, first.fwhm, peak.significance)
+    return first
 
 
 def _fitted(counts: NDArray[np.float64], channel: float, fwhm: float, significance: float) -> Peak:

@@ -81,9 +81,9 @@ def polish(reduced: Reduced, patterns: Patterns, chosen: tuple[int, ...], shape:
     resolution = shape.resolution
     for _ in range(_ROUNDS):
         solved = work.solve(scale, shape.with_resolution(resolution))
-        step = damped(solved.step, solved.channels, 0.4 * float(resolution.fwhm_kev(6.0)))
+        step = damped(solved.step, solved.channels, 0.4 * float(resolution.fwhm_kev(6.0)), scale.gain_kev)
         if moving:
-            scale = EnergyScale(scale.offset_kev + step[0], scale.gain_kev + step[1])
+            scale = EnergyScale(scale.offset_kev + float(step[0]), scale.gain_kev + float(step[1]))
         noise = float(np.clip((resolution.noise_ev * 1e-3) ** 2 + step[2], 0.015**2, most_noise_kev**2))
         resolution = Resolution(1e3 * math.sqrt(noise), resolution.fano, resolution.pair_energy_ev)
         if np.max(np.abs(step[0] + step[1] * solved.channels)) < 2e-4:

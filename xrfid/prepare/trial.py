@@ -166,12 +166,9 @@ class Bench:
         best = trial
         limit = 0.5 * float(_width(trial.noise, self.slope).fwhm_kev(6.0))
         for _ in range(rounds):
-            step = damped(self.step(best)[0], best.tops(self.reduced), limit)
+            step = damped(self.step(best)[0], best.tops(self.reduced), limit, best.scale.gain_kev)
             noise = float(np.clip(best.noise + step[2], -0.35 * self.slope * 5.9, 1.0))
-            gain = best.scale.gain_kev + step[1]
-            if gain <= 0:
-                break
-            scale = EnergyScale(best.scale.offset_kev + step[0], gain)
+            scale = EnergyScale(best.scale.offset_kev + float(step[0]), best.scale.gain_kev + float(step[1]))
             new = self.try_out(scale, noise, most)
             if new.score > best.score - 0.5:
                 return new if new.score < best.score else best
@@ -203,10 +200,12 @@ class Bench:
         return solved[:3], covariance
 
 
-def damped(step: NDArray[np.float64], channels: NDArray[np.float64], limit_kev: float) -> NDArray[np.float64]:
-    """Shorten a step in (offset, gain, ...) so that no line at `channels` moves by more than `limit_kev`."""
+def damped(step: NDArray[np.float64], channels: NDArray[np.float64], limit_kev: float, gain_kev: float
+           ) -> NDArray[np.float64]:  # fmt: skip
+    """Shorten a step in (offset, gain, ...): no line at `channels` by more than `limit_kev`, the gain by 10 %."""
     move = float(np.max(np.abs(step[0] + step[1] * channels), initial=0.0))
-    return np.asarray(step * min(1.0, limit_kev / max(move, 1e-12)))
+    by = min(1.0, limit_kev / max(move, 1e-12), 0.1 * gain_kev / max(abs(float(step[1])), 1e-15))
+    return np.asarray(step * by)
 
 
 def _width(noise: float, slope: float) -> Resolution:
