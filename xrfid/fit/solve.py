@@ -178,7 +178,8 @@ def _step_to_bound(
         hit = free & bounded & (trial < 0)
         if not hit.any():
             return trial, free
-        step = np.where(hit, x / np.maximum(x - trial, 1e-300), np.inf)
+        step = np.full(x.size, np.inf)
+        step[hit] = x[hit] / np.maximum(x[hit] - trial[hit], 1e-300)
         x = x + float(step.min()) * (trial - x)
         free = free & ~(hit & ((step <= step.min()) | (x <= 1e-12)))
         x = np.where(free, x, 0.0)

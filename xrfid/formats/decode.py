@@ -9,6 +9,8 @@ from xrfid.errors import InputError
 
 FEWEST_CHANNELS = 64
 MOST_CHANNELS = 65_536
+LONGEST_LINE = 2_000_000
+"""Characters; a whole spectrum of the most channels fits into one line several times over."""
 
 
 def decoded(name: str, data: bytes) -> str:
@@ -17,7 +19,7 @@ def decoded(name: str, data: bytes) -> str:
     Raises
     ------
     InputError
-        If the bytes are no text.
+        If the bytes are no text, or a line has no end.
     """
     if data[:2] in (b"\xff\xfe", b"\xfe\xff"):
         text = data.decode("utf-16", errors="replace")
@@ -34,7 +36,11 @@ def decoded(name: str, data: bytes) -> str:
     strange = sum(not (c.isprintable() or c in "\r\n\t\x0c") for c in sample)
     if strange > 0.02 * len(sample) + 2:
         raise InputError(name, "is a binary file of no known format", "give EMSA, N42, text or HDF5")
-    return text.replace("\r\n", "\n").replace("\r", "\n")
+    text = text.replace("\r\n", "\n").replace("\r", "\n")
+    longest = max(map(len, text.split("\n")))
+    if longest > LONGEST_LINE:
+        raise InputError(name, f"holds a line of {longest} characters", "write one row of numbers a line")
+    return text
 
 
 def checked_counts(

@@ -12,10 +12,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xrfid.atoms.absorption import ALL_Z, attenuation_table, gas_transmission
-from xrfid.atoms.elements import ATOMIC_NUMBER, SYMBOLS, symbol
+from xrfid.atoms.elements import ATOMIC_NUMBER, symbol
 from xrfid.atoms.ionisation import subshell_emission
 from xrfid.atoms.lines import GROUPS, LineTable, line_table
-from xrfid.errors import InputError, did_you_mean
+from xrfid.errors import InputError
 from xrfid.instrument import Instrument
 from xrfid.response.detector import efficiency
 from xrfid.response.excitation import Excitation, excitation
@@ -58,12 +58,17 @@ class Prediction:
         Index into `keys`; index into `GROUPS`; atomic number.
     line_efficiency : ndarray, shape (n_lines,)
         Path and detector, 0 to 1.
+
+    Raises
+    ------
+    InputError
+        If the anode or a stray element is no element.
     """
 
     def __init__(self, instrument: Instrument, end_kev: float | None = None) -> None:
         for name in instrument.stray.elements:
             if name not in ATOMIC_NUMBER:
-                raise InputError("stray.elements", f'"{name}" is no element symbol', did_you_mean(name, SYMBOLS))
+                raise InputError("stray.elements", f'"{name}" is no element symbol', 'write for example "Zr"')
         self.instrument = instrument
         self.source: Excitation = excitation(instrument, end_kev)
         self._sines = sines(instrument.geometry)
