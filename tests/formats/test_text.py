@@ -95,7 +95,8 @@ SHAPES: dict[str, Shape] = {
         lines("E,counts,error", *columns(fixed(ENERGY), COUNTS, fixed(np.sqrt(COUNTS)), by=",")), SCALE
     ),
     "statements before two columns": Shape(
-        lines("Live Time: 30.5", "Tube voltage: 40 kV", "", "Energy  Counts", *columns(fixed(ENERGY), COUNTS)), SCALE, 30.5
+        lines("Live Time: 30.5", "Tube voltage: 40 kV", "", "Energy  Counts", *columns(fixed(ENERGY), COUNTS)),
+        SCALE, 30.5,
     ),
     # several spectra
     "one energy column, three of counts": Shape(
@@ -105,6 +106,9 @@ SHAPES: dict[str, Shape] = {
     "quoted names with commas": Shape(
         lines('"energy (keV)","rim, upper","rim, lower"', *columns(fixed(ENERGY), COUNTS, OTHER, by=",")), SCALE,
         spectra=(COUNTS, OTHER), names=("rim, upper", "rim, lower"),
+    ),
+    "a column that is no spectrum, and a name that only contains such a word": Shape(
+        lines("keV,ferrite,background", *columns(fixed(ENERGY), COUNTS, OTHER, by=",")), SCALE
     ),
     "names that repeat": Shape(
         lines("keV\tspot\tspot", *columns(fixed(ENERGY), COUNTS, OTHER, by="\t")), SCALE,
@@ -130,7 +134,8 @@ SHAPES: dict[str, Shape] = {
     "carriage returns only": Shape(lines("live time: 30.5", *COUNTS, end="\r"), None, 30.5),
     # axes as they really come
     "energies rounded to 0.1, repeating": Shape(
-        lines("E,N", *columns(fixed(0.04 * CHANNEL + 0.02, 1), COUNTS, by=",")), EnergyScale(0.02, 0.04), within_kev=0.03
+        lines("E,N", *columns(fixed(0.04 * CHANNEL + 0.02, 1), COUNTS, by=",")),
+        EnergyScale(0.02, 0.04), within_kev=0.03,
     ),
     "energies that start below zero": Shape(
         lines("E N", *columns(fixed(ENERGY - 1.0), COUNTS)), EnergyScale(-1.12, 0.08)
@@ -179,6 +184,27 @@ def test_what_was_assumed_is_said(shape, says):
 def test_nothing_is_said_where_nothing_was_assumed():
     (spectrum,) = read_bytes("bench.txt", SHAPES["energy and counts, commas"].content.encode())
     assert spectrum.assumptions == ()
+
+
+def test_columns_left_out_are_said():
+    (spectrum,) = read_bytes("bench.txt", SHAPES["uncertainties beside counts"].content.encode())
+    assert spectrum.assumptions == ('columns headed "error" are taken as no counts and left out',)
+
+
+def test_words_that_only_contain_a_trade_word_state_nothing():
+    """A delivery is no live time, an amplifier's gain no scale."""
+    (spectrum,) = read_bytes("bench.txt", lines("Delivery: 7", "Surreal: 4", "Gain: 12.5", *COUNTS).encode())
+    assert (spectrum.live_time_s, spectrum.real_time_s, spectrum.scale) == (None, None, None)
+
+
+def test_a_gain_in_ev_is_a_scale():
+    (spectrum,) = read_bytes("bench.txt", lines("Gain (eV/channel): 80", "Offset (eV): -120", *COUNTS).encode())
+    assert spectrum.energy_kev == pytest.approx(ENERGY)
+
+
+def test_a_current_in_microamperes():
+    (spectrum,) = read_bytes("bench.txt", lines("Tube current (µA): 150", *COUNTS).encode())
+    assert spectrum.metadata["current_ma"] == pytest.approx(0.15)
 
 
 def test_overflow_in_the_last_channel_is_said():

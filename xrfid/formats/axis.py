@@ -55,22 +55,23 @@ def axis_of(values: NDArray[np.float64], name: str = "") -> Axis | None:
         return Axis(None, True, True, ())
     if whole and clean[-1] - clean[0] < 0.5 * clean.size and not _ENERGY_WORD.search(name):
         return None
-    return _energy_axis(clean, name, grid)
+    return _energy_axis(clean, name)
 
 
-def _energy_axis(values: NDArray[np.float64], name: str, grid: float) -> Axis:
+def _energy_axis(values: NDArray[np.float64], name: str) -> Axis:
     index = np.arange(values.size)
     quadratic, gain, offset = np.polyfit(index, values, 2)
     straight_gain, straight_offset = np.polyfit(index, values, 1)
     bent = np.max(np.abs(np.polyval([quadratic, gain, offset], index) - (straight_offset + straight_gain * index)))
     said: list[str] = []
-    rounded = len(np.unique(np.round(np.diff(values), 12))) > 1 and grid > 0
-    if rounded and bent < 1.0 * grid:
+    grid = _rounding(values)
+    off = np.max(np.abs(values - straight_offset - straight_gain * index))
+    if off > 0.02 * straight_gain and bent < grid:
         said.append(
             f"the energies are rounded to {grid:g}: the straight line through them is the scale "
             f"({straight_gain:.6g} per channel)"
         )
-    if bent < max(0.6 * grid if rounded else 0.0, 1e-6 * abs(values[-1])):
+    if bent < max(0.6 * grid, 1e-6 * abs(values[-1])):
         quadratic, gain, offset = 0.0, straight_gain, straight_offset
     top = float(values[-1])
     factor = 1.0
@@ -82,6 +83,14 @@ def _energy_axis(values: NDArray[np.float64], name: str, grid: float) -> Axis:
         said.append("the energy axis is headed eV, but can only be in keV: taken as keV")
     scale = EnergyScale(float(offset * factor), float(gain * factor), float(quadratic * factor))
     return Axis(scale, False, bool(_ENERGY_WORD.search(name)) or not np.all(values == np.round(values)), tuple(said))
+
+
+def _rounding(values: NDArray[np.float64]) -> float:
+    """The decimal place to which all values are rounded, such as 0.01; 0 if they are not."""
+    for digits in range(7):
+        if np.all(np.abs(values - np.round(values, digits)) < 1e-9):
+            return float(10.0**-digits)
+    return 0.0
 
 
 def fitted_scale(points: NDArray[np.float64]) -> EnergyScale | None:

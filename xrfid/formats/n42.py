@@ -160,7 +160,8 @@ def _through_bounds(bounds: NDArray[np.float64]) -> NDArray[np.float64]:
     if bounds.size < FEWEST_CHANNELS or np.any(np.diff(bounds) <= 0):
         return np.zeros(3)
     edges = np.arange(bounds.size) - 0.5
-    return np.polynomial.Polynomial.fit(edges, bounds, 2).convert().coef
+    found = np.polynomial.Polynomial.fit(edges, bounds, 2).convert().coef
+    return np.pad(np.asarray(found, dtype=np.float64), (0, 3 - found.size))
 
 
 def _duration(where: str, text: str | None) -> float | None:
