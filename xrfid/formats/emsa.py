@@ -72,7 +72,7 @@ def _split(name: str, text: str) -> tuple[dict[str, str], list[tuple[int, str]],
         if line.lstrip().startswith("#"):
             match = _KEY.match(line)
             bare = line.strip().lstrip("#").strip().upper()
-            if bare.startswith("ENDOFDATA"):
+            if bare.startswith("ENDOFDATA") and in_data:
                 return keys, rows, True
             if match is None:
                 if bare.startswith("SPECTRUM"):
@@ -142,13 +142,14 @@ def _scale(name: str, keys: dict[str, str], x: NDArray[np.float64] | None, n: in
     """Energy scale from the x column or from OFFSET and XPERCHAN."""
     unit = re.sub(r"[^a-z]", "", keys.get("XUNITS", "eV").lower())
     said: list[str] = []
+    quadratic = 0.0
     if unit not in _KEV_PER_UNIT:
         if unit and not unit.startswith("chan"):
             said.append(f'XUNITS is "{keys["XUNITS"]}", no energy: no energy scale is taken from the file')
         return None, said
     factor = _KEV_PER_UNIT[unit]
-    if x is not None and n > 1 and np.ptp(x) > 0:
-        gain, offset = np.polyfit(np.arange(n), x, 1)
+    if x is not None and n > 2 and np.ptp(x) > 0 and np.all(np.abs(x) < 1e9):
+        offset, gain, quadratic = _through(x)
     else:
         gain, offset = _number(name, keys, "XPERCHAN", math.nan), _number(name, keys, "OFFSET", 0.0)
     if not gain > 0:
@@ -161,7 +162,17 @@ def _scale(name: str, keys: dict[str, str], x: NDArray[np.float64] | None, n: in
     elif unit == "kev" and span > 2000:
         said.append("XUNITS says keV, but the values can only be eV: taken as eV")
         factor = 1e-3
-    return EnergyScale(float(offset * factor), float(gain * factor)), said
+    return EnergyScale(offset * factor, gain * factor, quadratic * factor), said
+
+
+def _through(x: NDArray[np.float64]) -> tuple[float, float, float]:
+    """Offset, gain and quadratic term of an x column; a bend counts if it is no rounding or wavering."""
+    index = np.arange(x.size)
+    straight, curved = np.polyfit(index, x, 1), np.polyfit(index, x, 2)
+    off, left = (np.max(np.abs(np.polyval(c, index) - x)) for c in (straight, curved))
+    if off > 0.02 * abs(straight[0]) and left < 0.25 * off and curved[1] > 0:
+        return float(curved[2]), float(curved[1]), float(curved[0])
+    return float(straight[1]), float(straight[0]), 0.0
 
 
 def _points(name: str, keys: dict[str, str]) -> int | None:
