@@ -180,4 +180,4 @@ def compton_momentum_profile(fractions: NDArray[np.float64], momentum: NDArray[n
     """
     known, profiles = _compton_profiles()
     moles = fractions / np.array([xraylib.AtomicWeight(int(z)) for z in ALL_Z])
-    return np.interp(np.abs(momentum), known, moles @ profiles, right=0.0)
+    return np.asarray(np.interp(np.abs(momentum), known, moles @ profiles, right=0.0))
