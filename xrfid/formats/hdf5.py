@@ -80,7 +80,12 @@ def _split_index(dataset: str) -> tuple[str, tuple[int, ...] | None]:
 
 def _named(called: str, file: h5py.File, path: str) -> h5py.Dataset:
     there = _candidates(file)
-    item = file.get(path) if path else None
+    if not path:  # only an index: a point of the one stack there is
+        found = _defaults(file) or there
+        if len(found) != 1:
+            raise InputError(called, f"holds {len(found)} datasets that can be spectra", _hint(path, there))
+        path = found[0]
+    item = file.get(path)
     if isinstance(item, h5py.Group):
         item = _signal(item)
     if item is None:
