@@ -35,7 +35,7 @@ def test_energies_of_the_handbook(element, name):
 
 
 def test_moseleys_law():
-    """Moseley, Phil. Mag. 26 (1913) 1024: the root of the K-alpha energy rises linearly with Z, as 10.2 eV (Z - 1)^2."""
+    """Moseley, Phil. Mag. 26 (1913) 1024: the root of the K-alpha energy is linear in Z, as 10.2 eV (Z - 1)^2."""
     z = np.array([ATOMIC_NUMBER[s] for s in "Ca Ti V Cr Mn Fe Co Ni Cu Zn".split()])
     root = np.sqrt([1e3 * energy(SYMBOLS[i - 1], "Ka1") for i in z])
     slope, _ = np.polyfit(z, root, 1)

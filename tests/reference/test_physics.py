@@ -82,7 +82,7 @@ def test_continuum_rises_with_voltage_squared_and_lines_with_current():
 
 
 def test_a_heavier_target_radiates_more_and_tungsten_mostly_continuum():
-    """Kramers 1923 (proportional to Z); a W tube's photons are mostly braking radiation (common practice, no source)."""
+    """Kramers 1923 (proportional to Z); a W tube sends out mostly braking radiation (common practice, no source)."""
     e, width = continuum_bins(40.0)
     light, heavy = (float(np.sum(braking_continuum(z, 40.0, e, 20.0) * width)) for z in (24, 74))
     assert heavy > light
@@ -91,7 +91,9 @@ def test_a_heavier_target_radiates_more_and_tungsten_mostly_continuum():
 
 
 # per cent of parent plus escape: Reed & Ware 1972 with a K yield of 0.050
-@pytest.mark.parametrize(("kev", "percent"), [(2.308, 1.51), (3.692, 0.91), (5.895, 0.38), (6.399, 0.32), (8.041, 0.18)])
+@pytest.mark.parametrize(
+    ("kev", "percent"), [(2.308, 1.51), (3.692, 0.91), (5.895, 0.38), (6.399, 0.32), (8.041, 0.18)]
+)
 def test_escape_from_silicon(kev, percent):
     line = escape_lines("Si")
     total = sum(float(escape_fraction("Si", x, np.array([kev]))[0]) for x in line)
@@ -105,7 +107,9 @@ def test_escape_from_germanium():
     assert fraction / (1 + fraction) == pytest.approx(0.12, abs=0.02)
 
 
-@pytest.mark.parametrize(("noise", "kev", "fwhm"), [(50, 5.899, 127), (80, 8.048, 159), (30, 22.16, 229), (120, 1.487, 134)])
+@pytest.mark.parametrize(
+    ("noise", "kev", "fwhm"), [(50, 5.899, 127), (80, 8.048, 159), (30, 22.16, 229), (120, 1.487, 134)]
+)
 def test_resolution_of_silicon(noise, kev, fwhm):
     """FWHM^2 = N^2 + 2.355^2 F eps E with F = 0.115, eps = 3.65 eV, worked by hand."""
     assert float(Resolution(float(noise)).fwhm_kev(kev)) * 1e3 == pytest.approx(fwhm, abs=1.0)
@@ -155,8 +159,10 @@ def test_shermans_equation(alloy, expected):
 
 
 def test_thick_samples_change_k_beta():
-    """Factor on K-beta/K-alpha = [mu(E0) + mu(Ka)] / [mu(E0) + mu(Kb)], 45/45 degrees, 20.216 keV: worked by hand."""
-    prediction = Prediction(Instrument.from_table({"source": {"lines_kev": [20.216]}, "path": {"atmosphere": "vacuum"}}))
+    """Factor on K-beta/K-alpha = [mu(E0) + mu(Ka)] / [mu(E0) + mu(Kb)], 45/45 degrees, 20.216 keV: by hand."""
+    prediction = Prediction(
+        Instrument.from_table({"source": {"lines_kev": [20.216]}, "path": {"atmosphere": "vacuum"}})
+    )
 
     def factor(composition, element):
         z = ATOMIC_NUMBER[element]

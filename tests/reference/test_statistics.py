@@ -33,7 +33,7 @@ def test_snip_equals_pybaselines():
 
 
 def test_areas_equal_an_lmfit_fit_of_separate_gaussians():
-    """lmfit (Levenberg-Marquardt, weights from the expected counts): areas agree within 0.1 sigma, errors within 3 %."""
+    """lmfit (Levenberg-Marquardt, weights from the expected counts): areas within 0.1 sigma, errors within 3 %."""
     rng, x, sigma = np.random.default_rng(5), np.arange(300), 5.0
     shapes = np.array([np.exp(-0.5 * ((x - c) / sigma) ** 2) / (sigma * np.sqrt(2 * np.pi)) for c in (80, 150, 220)])
     counts = rng.poisson(np.array([3e4, 8e3, 1.5e4]) @ shapes + 50).astype(float)
@@ -49,7 +49,9 @@ def test_areas_equal_an_lmfit_fit_of_separate_gaussians():
 
     theirs = lmfit.minimize(residual, parameters, scale_covar=False)
     for i in range(4):
-        assert ours.coefficients[i] == pytest.approx(theirs.params[f"a{i}"].value, abs=0.1 * theirs.params[f"a{i}"].stderr)
+        assert ours.coefficients[i] == pytest.approx(
+            theirs.params[f"a{i}"].value, abs=0.1 * theirs.params[f"a{i}"].stderr
+        )
         assert np.sqrt(ours.covariance[i, i]) == pytest.approx(theirs.params[f"a{i}"].stderr, rel=0.03)
 
 
@@ -96,7 +98,7 @@ def test_threshold_allows_for_the_number_of_candidates():
 
 
 def test_poisson_fit_is_unbiased_where_least_squares_is_not():
-    """Mighell, Astrophys. J. 518 (1999) 380: weights from the counts lose one count per channel, the likelihood none."""
+    """Mighell, Astrophys. J. 518 (1999) 380: weights from the counts lose a count per channel, the likelihood none."""
     rng = np.random.default_rng(2)
     none = np.zeros(1)
     problem = LinearProblem(np.ones((1, 200)), np.ones(1, bool), none, none)
