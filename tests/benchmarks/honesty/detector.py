@@ -158,7 +158,7 @@ def _core(x: Array, sigma: Array, width_kev: Array, gain_kev: float) -> Array:
     return core
 
 
-def exponential_tail(x: Array, sigma: Array, decay_kev: float) -> Array:
+def exponential_tail(x: Array, sigma: Array, decay_kev: Array | float) -> Array:
     """Exponential towards low energy, folded with the Gaussian: per keV, unit area, in the shape of `x`."""
     s = sigma[:, None]
     u = x / s

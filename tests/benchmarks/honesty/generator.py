@@ -19,7 +19,7 @@ import numpy as np
 import xraydb
 
 from .atomic import Array, Composition
-from .detector import SI_EDGE_KEV, exponential_tail, piled_up, respond, respond_to_continuum, survival
+from .detector import exponential_tail, piled_up, respond, respond_to_continuum, survival
 from .instrument import Setup, draw_setup
 from .nature import Nature
 from .sample import Emission, Sample, Scatter, argon, fluorescence, scatter
@@ -225,14 +225,25 @@ def _scattered(s: Scatter, light: Beam, setup: Setup) -> tuple[Array, Array]:
 
 
 def _compton_lines(s: Scatter, incoherent: Array, first: int, setup: Setup) -> Array:
-    """Scattered lines with Doppler width, and a low-energy tail from photons that scattered twice."""
+    """Scattered lines with Doppler width, and a low-energy tail from photons that scattered twice.
+
+    The tail's share follows that of scatter in the sample's attenuation, its length the energy that one
+    more scatter takes, which grows with the square of the energy.
+    """
     energy, n, blur = s.compton_kev[first:], incoherent[first:], s.width_kev[first:]
     single = n @ respond(setup.detector, setup.channels, energy, np.zeros(n.size), blur)
     sigma = np.sqrt(setup.detector.sigma_kev(energy) ** 2 + blur**2)
     x = setup.channels.centres_kev[None, :] - energy[:, None]
-    hard = n * (energy > 2.0 * SI_EDGE_KEV)  # soft photons hardly scatter twice
-    twice = hard @ exponential_tail(x, sigma, setup.multiple_kev) * setup.channels.gain_kev
-    return single + setup.multiple_share * twice
+    decay = setup.multiple_kev * (energy / 20.0) ** 2
+    again = setup.multiple_share * s.albedo[first:] * n
+    long = decay > 0.2 * sigma  # shorter ones do not show
+    twice = again[long] @ exponential_tail(x[long], sigma[long], decay[long, None])
+    return (
+        single
+        + again[~long]
+        @ respond(setup.detector, setup.channels, energy[~long], np.zeros(int(np.sum(~long))), blur[~long])
+        + twice * setup.channels.gain_kev
+    )
 
 
 def _diffracts(rng: np.random.Generator, recipe: dict[str, Any]) -> bool:
@@ -240,11 +251,11 @@ def _diffracts(rng: np.random.Generator, recipe: dict[str, Any]) -> bool:
 
 
 def _diffraction(rng: np.random.Generator, peaks: tuple[float, ...], total: float, setup: Setup) -> Array:
-    """Bragg peaks of the continuum: somewhat wider than a line, 0.1 to 0.5 per cent of all counts each."""
+    """Bragg peaks of the continuum: somewhat wider than a line, 0.03 to 0.3 per cent of all counts each."""
     out = np.zeros(setup.channels.n)
     for e in peaks:
-        blur = rng.uniform(0.003, 0.012) * e
-        share = math.exp(rng.uniform(math.log(1e-3), math.log(5e-3)))
+        blur = rng.uniform(0.002, 0.008) * e
+        share = math.exp(rng.uniform(math.log(3e-4), math.log(3e-3)))
         out += share * total * respond(setup.detector, setup.channels, np.array([e]), np.zeros(1), blur)[0]
     return out
 

@@ -40,7 +40,11 @@ TUBES: tuple[tuple[str, float, float, tuple[tuple[str, float], ...]], ...] = (
 
 @dataclass(frozen=True)
 class Setup:
-    """The true instrument and, in `stated_*`, what is written about it."""
+    """The true instrument and, in `stated_*`, what is written about it.
+
+    `multiple_share` is the number of photons scattered twice per scattered one and unit albedo,
+    `multiple_kev` the mean energy that this takes from 20 keV.
+    """
 
     tube: Tube
     geometry: Geometry
@@ -122,7 +126,7 @@ def draw_setup(rng: np.random.Generator, detector_kind: str | None = None) -> Se
         kind,
         float(rng.uniform(0.6e-7, 4e-7)),
         math.exp(rng.normal(0.0, 0.2)),
-        float(rng.uniform(0.08, 0.25)),
+        float(rng.uniform(0.3, 0.8)),
         float(rng.uniform(0.25, 0.6)),
         header,
         geometry,

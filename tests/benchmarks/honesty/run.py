@@ -141,6 +141,8 @@ def _trials(case: Case, result: Any, instrument: Any, folder: Path, rng: np.rand
     absent = sorted(set(limits) - case.present - _NO_TRIAL - {case.setup.tube.anode})
     done: list[Trial] = []
     for element in map(str, rng.permutation(absent)):
+        if len(done) >= n:
+            break
         series = _most_sensitive(case, element, limits[element])
         if series is None:
             continue
@@ -151,8 +153,6 @@ def _trials(case: Case, result: Any, instrument: Any, folder: Path, rng: np.rand
         stated_then = (s for f in again.findings if f.element == element for s in f.series if s.series == series)
         area = next((s.area for s in stated_then), 0.0)
         done.append(Trial(element, series, stated.detection_limit, stated.decision_threshold, area))
-        if len(done) == n:
-            break
     return done
 
 

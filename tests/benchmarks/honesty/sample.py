@@ -145,13 +145,17 @@ def _strongest(sources, beam: Beam) -> tuple[Array, Array]:  # type: ignore[no-u
 
 @dataclass(frozen=True, eq=False)
 class Scatter:
-    """Scattered photons, entry by entry of the beam; `width_kev` is the Compton peak's Doppler sigma."""
+    """Scattered photons, entry by entry of the beam.
+
+    `width_kev` is the Compton peak's Doppler sigma, `albedo` the share of scatter in the attenuation.
+    """
 
     rayleigh_kev: Array
     rayleigh: Array
     compton_kev: Array
     compton: Array
     width_kev: Array
+    albedo: Array
 
 
 def scatter(sample: Sample, beam: Beam, geometry: Geometry) -> Scatter:
@@ -176,11 +180,12 @@ def scatter(sample: Sample, beam: Beam, geometry: Geometry) -> Scatter:
         through = np.exp(-into - attenuation(sample.composition, energy) * mass / s2)
         through_shifted = np.exp(-into - attenuation(sample.composition, shifted) * mass / s2)
     return Scatter(
-        energy,
-        beam.photons * coherent / (a + b) * through,
-        shifted,
-        beam.photons * incoherent / (a + b_shifted) * through_shifted,
-        _doppler(base, energy, geometry.scatter_deg),
+        rayleigh_kev=energy,
+        rayleigh=beam.photons * coherent / (a + b) * through,
+        compton_kev=shifted,
+        compton=beam.photons * incoherent / (a + b_shifted) * through_shifted,
+        width_kev=_doppler(base, energy, geometry.scatter_deg),
+        albedo=1.0 - sum(w * cross_section("photo", z, energy) for z, w in base.items()) / (a * s1),
     )
 
 
