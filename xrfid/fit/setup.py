@@ -19,8 +19,8 @@ from xrfid.response.series import Prediction
 from xrfid.spectrum import EnergyScale, Spectrum
 
 LOWEST_FITTED_KEV = 0.85
-KNOT_SPACING_FWHM = 8.0
-KNOT_LEAST_KEV = 0.8
+KNOT_SPACING_FWHM = 7.0
+KNOT_LEAST_KEV = 0.7
 CURVATURE = 0.3
 USUAL_PULSE_PAIR_NS = 300.0
 

@@ -31,10 +31,14 @@ def decide(found: ElementEvidence) -> tuple[Verdict, str]:
 
 
 _TOO_MUCH = 0.35
+_OVERWHELMING = 60.0
+"""Above this significance a line or two may be drowned in a neighbour's tolerances."""
 
 
 def _much_is_missing(evidence: Evidence) -> bool:
     """Whether the lines that do not show carry a good part of the element, or nothing else is its own."""
+    if evidence.significance < _OVERWHELMING:
+        return True
     predicted = sum(line.predicted for line in evidence.lines)
     missing = sum(x.predicted for x in evidence.lines if f"{x.series} {x.group}" in evidence.missing_lines)
     return missing > _TOO_MUCH * predicted or not evidence.strongest_own_line

@@ -32,6 +32,8 @@ CLEAR_SHIFT_KEV = 0.01
 """A stated scale is called wrong only if a strong line lies farther off than this, and than 4 sigma."""
 WORN = 1.15
 """Measured over stated width from which the detector is called worn or noisy."""
+BROADENED = 1.7
+"""Peaks wider still are no lines but scattered radiation (Doppler width) or blends: the stated width stays."""
 
 
 def establish(spectrum: Spectrum, instrument: Instrument) -> tuple[Calibration, float | None]:
@@ -301,7 +303,7 @@ def _resolution(noise_kev: float | None, instrument: Instrument) -> tuple[Resolu
         return stated, ""
     if detector.fwhm_mn_ka_ev is None:
         return measured, ""
-    if fwhm > WORN * detector.fwhm_mn_ka_ev:
+    if WORN < fwhm / detector.fwhm_mn_ka_ev < BROADENED:
         return measured, (
             f"the lines are {fwhm:.0f} eV wide at Mn K-alpha, not {detector.fwhm_mn_ka_ev:.0f} as stated: "
             "worn or noisy detector, or a high count rate"
