@@ -2,7 +2,8 @@
 
 The same prediction as in identification, put together the other way round. It tests instruments and
 procedures; it does not test the prediction (`tests/benchmarks/honesty` has a generator with other
-atomic data for that). Enhancement is included for thick samples; argon of the air path is not.
+atomic data for that). Enhancement is included for thick samples, not for coated ones; the argon of
+an air path is, as if the beam lit all of it.
 """
 
 from __future__ import annotations
@@ -16,6 +17,8 @@ import numpy as np
 from numpy.typing import NDArray
 from pydantic import BaseModel, ConfigDict, Field, ValidationError
 
+from xrfid.atoms.absorption import AIR, GAS_DENSITY_G_CM3
+from xrfid.atoms.elements import symbol
 from xrfid.errors import InputError, did_you_mean
 from xrfid.fit.design import scatter_columns, scattered_continuum
 from xrfid.fit.grouping import Grouping
@@ -86,16 +89,28 @@ def load_recipe(path: str | Path) -> Recipe:
     """
     try:
         return Recipe.model_validate(tomllib.loads(Path(path).read_text(encoding="utf-8")))
-    except (OSError, UnicodeDecodeError) as error:
-        raise InputError(str(path), f"cannot be read ({error})", "give a recipe (TOML)") from None
+    except OSError as error:
+        raise InputError(str(path), f"cannot be read ({error.strerror})", "give a recipe (TOML)") from None
+    except UnicodeDecodeError:
+        raise InputError(str(path), "is not a text file", "give a recipe (TOML)") from None
     except tomllib.TOMLDecodeError as error:
         raise InputError(str(path), f"is not valid TOML ({error})", "mend the line named") from None
     except ValidationError as error:
-        first = error.errors()[0]
-        key = ".".join(str(part) for part in first["loc"])
-        if first["type"] == "extra_forbidden":
-            raise InputError(str(path), f'unknown key "{key}"', did_you_mean(key, Recipe.model_fields)) from None
-        raise InputError(str(path), f"{key}: {first['msg']}", "correct this value") from None
+        raise _explained(error, str(path)) from None
+
+
+def _explained(error: ValidationError, source: str) -> InputError:
+    """Turn the first validation error into one line that names the key and what would do."""
+    first = error.errors()[0]
+    key = ".".join(str(part) for part in first["loc"])
+    if first["type"] == "extra_forbidden":
+        known = (Coating if len(first["loc"]) > 1 else Recipe).model_fields
+        return InputError(source, f'unknown key "{key}"', did_you_mean(str(first["loc"][-1]), known))
+    if first["type"] == "missing":
+        return InputError(source, f'"{key}" is missing', "add it")
+    got = first.get("input")
+    shown = "" if isinstance(got, dict) else f" (got {got!r})"
+    return InputError(source, f"{key}: {first['msg']}{shown}", "correct this value")
 
 
 def recipe_instrument(recipe: Recipe, folder: Path, source: str) -> Instrument:
@@ -119,7 +134,7 @@ def simulate(recipe: Recipe, instrument: Instrument) -> Simulated:
     grouping = Grouping(np.arange(recipe.channels + 1), edges)
     shape = LineShape.of(instrument.detector)
     below = _fractions(recipe.sample, "sample")
-    weight = _line_weights(recipe, prediction, below)
+    weight = _line_weights(recipe, prediction, below) + _air_of_the_path(prediction)
     inside = (prediction.line_energy_kev > max(edges[0], 0.3)) & (prediction.line_energy_kev < edges[-1]) & (weight > 0)
     lines = DrawnLines(prediction.line_energy_kev[inside], weight[inside], prediction.line_series[inside])
     series = draw(lines.with_escapes(instrument.detector.material), shape, edges, len(prediction.keys))
@@ -158,6 +173,16 @@ def _line_weights(recipe: Recipe, prediction: Prediction, below: NDArray[np.floa
     above = _fractions(recipe.coating.composition, "coating")
     coated, veiled = prediction.layered_intensities(Layer(above, mass), Layer(below))
     return coated * above[of_element] + veiled * below[of_element]
+
+
+def _air_of_the_path(prediction: Prediction) -> NDArray[np.float64]:
+    """Counts of each line of the gas between sample and detector, in the same units."""
+    path = prediction.instrument.path
+    if path.atmosphere != "air" or path.length_mm == 0:
+        return np.zeros(prediction.line_z.size)
+    air = mass_fractions({symbol(z): w for z, w in AIR.items()})
+    layer = Layer(air, GAS_DENSITY_G_CM3["air"] * 0.1 * path.length_mm)
+    return prediction.layered_intensities(layer, None)[0] * air[prediction.line_z - 1]
 
 
 def _scattered(prediction: Prediction, fractions: NDArray[np.float64], shape: LineShape, grouping: Grouping
