@@ -11,7 +11,7 @@ import click
 from xrfid.cli.options import instrument_option, load_instrument, overwrite_option
 
 if TYPE_CHECKING:
-    from xrfid.identify.reach import ReachReport
+    from xrfid.identify.reach import Reach, ReachReport
 
 
 @click.command()
@@ -40,7 +40,7 @@ def _show(report: ReachReport) -> None:
     console.print(
         f"Detection limits in a spectrum of {COUNTS:.0e} counts, per cent by mass; best series of each element.\n"
     )
-    best = {}
+    best: dict[str, tuple[float, Reach]] = {}
     for r in report.series:
         limit = min(v for _, v in r.limits)
         if r.element not in best or limit < best[r.element][0]:

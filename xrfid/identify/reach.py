@@ -6,6 +6,7 @@ the detection limit (ISO 11929, 5 % errors) of every series follows from its inf
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import Any
 
@@ -82,7 +83,7 @@ def reach(instrument: Instrument, counts: float = COUNTS) -> ReachReport:
     shape = LineShape.of(instrument.detector)
     end = prediction.source.end_kev
     scale = instrument.energy_scale or EnergyScale(0.0, 1.1 * end / _CHANNELS)
-    first = int(np.ceil(max(scale.channel(LOWEST_FITTED_KEV), 0.0)))
+    first = max(math.ceil(float(scale.channel(LOWEST_FITTED_KEV))), 0)
     last = int(np.clip(scale.channel(1.1 * end), first + 64, 65_536))
     grouping = Grouping.of(scale, shape.resolution, first, last)
     found: dict[SeriesKey, list[tuple[str, float]]] = {}

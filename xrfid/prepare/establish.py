@@ -30,7 +30,7 @@ from xrfid.spectrum import FANO_FACTOR, PAIR_ENERGY_EV, EnergyScale, Resolution,
 
 CLEAR_SHIFT_KEV = 0.01
 """A stated scale is called wrong only if a strong line lies farther off than this, and than 4 sigma."""
-WORN = 1.15
+WORN = 1.3
 """Measured over stated width from which the detector is called worn or noisy."""
 BROADENED = 1.7
 """Peaks wider still are no lines but scattered radiation (Doppler width) or blends: the stated width stays."""
@@ -150,7 +150,7 @@ def _looked_into(spectrum: Spectrum, stated: _Stated, seen: Look, instrument: In
     assert stated.usable is not None
     search = Search(spectrum.counts, instrument, end)
     if len(search.real) < 2:
-        return _kept(stated, "", instrument)
+        return _kept(stated, "", instrument, search)
     near = _near(search, stated.usable)
     if near.trial.explained > _WELL and seen.covered > 0.4:
         if _of_a_neighbour(near, stated.usable) < _SAME_ELEMENTS:
@@ -186,7 +186,7 @@ def _near_by(search: Search, stated: _Stated, instrument: Instrument) -> Calibra
             f"{stated.whose} does not fit the peaks, but this spectrum cannot say what the right one is; used as "
             "stated; calibrate on known elements"
         )
-        return _kept(stated, note, instrument)
+        return _kept(stated, note, instrument, search)
     return _corrected(found.best, search, stated, instrument)
 
 
@@ -233,7 +233,7 @@ def _corrected(candidate: Candidate, search: Search, stated: _Stated, instrument
     scale = _anchored(candidate, stated.usable)
     shift, energy = _shift(candidate, scale, stated.usable)
     if doubtful and candidate.trial.explained < _WELL - 0.1:
-        return _kept(stated, f"{stated.whose} could not be confirmed from the peaks; used as stated", instrument)
+        return _kept(stated, f"{stated.whose} could not be confirmed from the peaks; used as stated", instrument, search)
     if abs(shift) <= CLEAR_SHIFT_KEV:
         made = _from_candidate(candidate, stated.note, instrument)
         return replace(made, scale=stated.usable, origin=stated.origin)
@@ -244,11 +244,18 @@ def _corrected(candidate: Candidate, search: Search, stated: _Stated, instrument
     return replace(made, scale=scale, stated=stated.scale)
 
 
-def _kept(stated: _Stated, note: str, instrument: Instrument) -> Calibration:
-    """The stated scale, because nothing better is sure."""
+def _kept(stated: _Stated, note: str, instrument: Instrument, search: Search) -> Calibration:
+    """The stated scale, because nothing better is sure; the fit may move it as far as such scales are off."""
     assert stated.usable is not None
-    resolution, worn = _resolution(None, instrument)
-    return Calibration(stated.usable, resolution, stated.origin, 0.0, _joined(_joined(stated.note, note), worn))
+    noise = math.sqrt(max(search.noise(stated.usable), 0.0)) if search.real else None
+    resolution, worn = _resolution(noise, instrument)
+    said = _joined(_joined(stated.note, note), worn)
+    gain_sigma = _DOUBTFUL_GAIN * stated.usable.gain_kev
+    return Calibration(stated.usable, resolution, stated.origin, 0.0, said, _DOUBTFUL_KEV, gain_sigma)
+
+
+_DOUBTFUL_KEV, _DOUBTFUL_GAIN = 0.1, 0.01
+"""Standard uncertainty of a stated scale that the peaks do not confirm, offset and relative gain."""
 
 
 def _anchored(candidate: Candidate, stated: EnergyScale) -> EnergyScale:
