@@ -12,11 +12,10 @@ import hdf5plugin  # noqa: F401  # registers the common compression filters with
 import numpy as np
 
 from xrfid.errors import InputError, did_you_mean
+from xrfid.formats.hdf5 import energy_axis
 from xrfid.spectrum import EnergyScale
 
 _FEWEST_CHANNELS = 32
-_LINEAR_TO_CHANNELS = 0.05
-"""An energy axis counts as polynomial if it is met to this share of a channel."""
 
 
 class PaddedFile(io.RawIOBase):
@@ -142,32 +141,9 @@ def _named(file: h5py.File, path: Path, name: str, stacks: list[str]) -> str:
     return str(item.name)
 
 
-def energy_axis(dataset: h5py.Dataset) -> EnergyScale | None:
-    """Return the scale of a dataset's last axis, from the axis its group names or a neighbour "energy"."""
-    group, n = dataset.parent, dataset.shape[-1]
-    axes = group.attrs.get("axes")
-    names = [_text(a) for a in np.atleast_1d(axes)] if axes is not None else []
-    for name in [*names[-1:], "energy", "energy_kev"]:
-        item = group.get(name)
-        if isinstance(item, h5py.Dataset) and item.shape in ((n,), (n + 1,)) and item.dtype.kind in "iuf":
-            scale = _polynomial(np.asarray(item[()], dtype=float), n, _text(item.attrs.get("units")), name)
-            if scale is not None:
-                return scale
-    return None
-
-
-def _polynomial(values: Any, n: int, units: str, name: str) -> EnergyScale | None:
-    """Describe an energy axis (centres, or edges if one longer) by offset, gain and quadratic term."""
-    kev = {"kev": 1.0, "ev": 1e-3, "mev": 1e3}.get(units.lower(), 1.0 if name == "energy_kev" else None)
-    if kev is None or not np.all(np.isfinite(values)) or not np.all(np.diff(values) > 0):
-        return None
-    channel = np.arange(n) if values.size == n else np.arange(n + 1) - 0.5
-    for degree in (1, 2):
-        c = np.polynomial.Polynomial.fit(channel, values * kev, degree).convert().coef
-        left = np.abs(np.polynomial.polynomial.polyval(channel, c) - values * kev).max()
-        if left < _LINEAR_TO_CHANNELS * c[1] and c[1] > 0:
-            return EnergyScale(float(c[0]), float(c[1]), float(c[2]) if degree == 2 else 0.0)
-    return None
+def run_scale(dataset: h5py.Dataset) -> EnergyScale | None:
+    """Return the scale of a dataset's last axis, as the reader of single spectra finds it."""
+    return energy_axis(dataset)[0]
 
 
 def _text(value: Any) -> str:

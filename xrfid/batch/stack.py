@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from xrfid.batch.layer import Box, Layer
-from xrfid.batch.locate import energy_axis, find_datasets, open_input
+from xrfid.batch.locate import find_datasets, open_input, run_scale
 from xrfid.errors import InputError
 from xrfid.spectrum import EnergyScale
 
@@ -87,7 +87,7 @@ class Stack:
         self._layers = [layer for d in datasets for layer in self._split(d)]
         first = self._layers[0]
         self.shape, self.n_channels = first.shape[:-1], first.shape[-1]
-        self.scale: EnergyScale | None = energy_axis(datasets[0])
+        self.scale: EnergyScale | None = run_scale(datasets[0])
         self.signed = any(layer.dtype.kind != "u" for layer in self._layers)
         self.dtype = first.dtype
         self._extent = _extent(self.shape, first.chunks, self.n_channels, first.dtype.itemsize)
