@@ -233,7 +233,8 @@ def _corrected(candidate: Candidate, search: Search, stated: _Stated, instrument
     scale = _anchored(candidate, stated.usable)
     shift, energy = _shift(candidate, scale, stated.usable)
     if doubtful and candidate.trial.explained < _WELL - 0.1:
-        return _kept(stated, f"{stated.whose} could not be confirmed from the peaks; used as stated", instrument, search)
+        note = f"{stated.whose} could not be confirmed from the peaks; used as stated"
+        return _kept(stated, note, instrument, search)
     if abs(shift) <= CLEAR_SHIFT_KEV:
         made = _from_candidate(candidate, stated.note, instrument)
         return replace(made, scale=stated.usable, origin=stated.origin)
