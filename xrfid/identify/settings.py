@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from scipy.special import ndtri
+
 from xrfid.atoms.elements import ATOMIC_NUMBER, NOBLE_GASES, UNSTABLE
 from xrfid.errors import InputError, did_you_mean
 from xrfid.response.series import SeriesKey
@@ -47,9 +49,7 @@ class Settings:
 
     def threshold(self, n_candidates: int) -> float:
         """Significance at which one of `n_candidates` chance elements is named at the level asked for."""
-        from scipy.stats import norm
-
-        return float(norm.isf(self.false_identification_level / max(n_candidates, 1)))
+        return float(-ndtri(self.false_identification_level / max(n_candidates, 1)))
 
     def allows(self, key: SeriesKey) -> bool:
         """Whether a series may be offered to the fit."""

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.signal import fftconvolve
+from scipy.fft import irfft, next_fast_len, rfft
 
 from xrfid.spectrum import EnergyScale
 
@@ -30,7 +30,7 @@ def pair_spectrum(counts: NDArray[np.float64], scale: EnergyScale) -> NDArray[np
     n = counts.size
     positive = scale.energy_kev(np.arange(n)) > 0
     seen = np.where(positive, counts, 0.0)
-    both = np.maximum(fftconvolve(seen, seen), 0.0)
+    both = _convolved(seen, seen)
     index = np.arange(both.size)
     # the pair of channels (i, j) has energy E_i + E_j; with a linear scale that is one sum of indices
     energy = 2.0 * scale.offset_kev + scale.gain_kev * index
@@ -90,10 +90,18 @@ def partial_overlaps(counts: NDArray[np.float64], scale: EnergyScale) -> NDArray
             part, weight = middle + step * k / _FINE, (1.0 - abs(k) / _FINE) / _FINE
             if part > 0.02:
                 squeezed[i] += weight * np.diff(np.interp(edges / part, edges, cumulative, left=0.0))
-    both = np.maximum(fftconvolve(squeezed, seen[None], axes=1), 0.0)
+    both = _convolved(squeezed, seen)
     start = round(scale.offset_kev / scale.gain_kev)
     out = np.zeros((PARTS.size, n))
     index = np.arange(both.shape[1]) + start
     inside = (index >= 0) & (index < n)
     out[:, index[inside]] = both[:, inside]
     return out
+
+
+def _convolved(first: NDArray[np.float64], second: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Convolution along the last axis, by Fourier transforms; never negative."""
+    n = first.shape[-1] + second.shape[-1] - 1
+    size = next_fast_len(n, real=True)
+    both = irfft(rfft(first, size) * rfft(second, size), size)[..., :n]
+    return np.asarray(np.maximum(both, 0.0))
