@@ -11,7 +11,7 @@ import click
 from xrfid.cli.options import instrument_option, load_instrument, overwrite_option
 
 if TYPE_CHECKING:
-    from xrfid.identify.reach import Reach, ReachReport
+    from xrfid.identify.reach import ReachReport
 
 
 @click.command()
@@ -34,27 +34,26 @@ def _show(report: ReachReport) -> None:
     from rich.console import Console
     from rich.table import Table
 
-    from xrfid.identify.reach import COUNTS, GOOD, WEAK
+    from xrfid.identify.reach import GOOD, HARD, INSEPARABLE, WEAK
 
     console = Console()
-    console.print(
-        f"Detection limits in a spectrum of {COUNTS:.0e} counts, per cent by mass; best series of each element.\n"
-    )
-    best: dict[str, tuple[float, Reach]] = {}
-    for r in report.series:
-        limit = min(v for _, v in r.limits)
-        if r.element not in best or limit < best[r.element][0]:
-            best[r.element] = (limit, r)
+    counts = f"{report.counts:.0e} counts"
+    console.print(f"Detection limits in a spectrum of {counts}, per cent by mass; best series of each element.\n")
     table = Table("Element", "Series", "Line / keV", "in light matter", "in steel", "", box=None, pad_edge=False)
-    for _, r in best.values():
+    for r in report.best():
         limits = dict(r.limits)
         shown = [_percent(limits[m]) for m in ("light", "steel")]
         table.add_row(r.element, r.series, f"{r.main_line_kev:.2f}", *shown, r.grade)
     console.print(table)
     console.print(f"\nwithin reach: below {100 * GOOD:g} %; weak: below {100 * WEAK:g} %; hardly: above.")
-    if report.inseparable:
-        pairs = ", ".join(f"{a} and {b}" for a, b, _ in report.inseparable[:12])
-        console.print(f"\nLines that all but coincide ({len(report.inseparable)} pairs): {pairs}")
+    console.print(f"Out of reach: {' '.join(report.beyond)}")
+    for title, chosen in (
+        (f"Cannot be separated (uncertainty more than {INSEPARABLE:g} times larger)", True),
+        (f"Hard to separate (more than {HARD:g} times)", False),
+    ):
+        pairs = [f"{p.a} and {p.b}" for p in report.pairs if p.inseparable == chosen]
+        if pairs:
+            console.print(f"\n{title}: {', '.join(pairs)}.")
     for said in report.assumptions:
         console.print(f"Assumed: {said}")
 
