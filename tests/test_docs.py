@@ -1,8 +1,8 @@
 """Every command and code block of the documentation is run, page by page, and its output compared loosely.
 
-A page's blocks run one after the other in one folder that holds ``sample_spectra``. The ``text`` block that follows
-one or several ``sh`` or ``python`` blocks shows their output: its lines must appear in this order; ``...`` stands for
-any lines, or for the rest of one; numbers may differ by a seventh. Blocks of other kinds (``toml``, ``text``) are not run.
+A page's blocks run one after the other in one folder that holds ``sample_spectra``. The ``text`` block after
+one or several ``sh`` or ``python`` blocks shows their output: its lines must appear in this order; ``...`` stands
+for any lines, or for the rest of one; numbers may differ by a seventh. Other blocks (``toml``, ``text``) are not run.
 """
 
 from __future__ import annotations
