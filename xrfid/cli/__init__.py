@@ -18,7 +18,6 @@ _COMMANDS = {
     "reach": "Tell which elements an instrument can show at all.",
     "simulate": "Make a spectrum with known content from a recipe.",
     "convert": "Write spectra in another format.",
-    "review": "Look at evidence and decide, in the browser.",
 }
 
 
