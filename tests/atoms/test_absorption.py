@@ -81,7 +81,7 @@ def test_materials_by_symbol_formula_and_name():
 
 
 def test_wrong_materials_are_refused():
-    with pytest.raises(InputError, match="Unobtainium.*is no element"):
+    with pytest.raises(InputError, match=r"Unobtainium.*is no element"):
         material("Unobtainium")
     with pytest.raises(InputError, match="has no known density; add density_g_cm3"):
         layer_transmission("Fe3C", 1.0, 5.0)
