@@ -15,7 +15,7 @@ from xrfid.fit.model import Fit
 from xrfid.identify.artefacts import artefacts, loose_peaks
 from xrfid.identify.cautions import assumptions, cautions
 from xrfid.identify.evidence import ElementEvidence, gather
-from xrfid.identify.limits import CharacteristicLimits, characteristic_limits, limits_in_fit
+from xrfid.identify.limits import K_95, CharacteristicLimits, characteristic_limits, limits_in_fit
 from xrfid.identify.result import (
     Curves,
     Evidence,
@@ -32,6 +32,10 @@ from xrfid.identify.work import Work
 from xrfid.prepare.calibration import Calibration
 from xrfid.response.sample import LIGHT_MATRIX, composition_of
 from xrfid.response.series import SeriesKey
+
+
+AREA_PRECISION = 0.005
+"""Relative uncertainty of any area: where a line's tail and shelf end is a matter of the model."""
 
 
 def assemble(work: Work) -> Identification:
@@ -89,14 +93,14 @@ def _series(work: Work, found: ElementEvidence) -> tuple[SeriesResult, ...]:
     own = np.sum([work.fit.areas[k] * u for k, u in zip(found.keys, unit, strict=True)], axis=0)
     names = [str(k) for k in found.keys]
     limits = limits_in_fit(work.fit, names, unit, own, local_misfit(work.fit, work.ingredients.counts))
-    misfit = np.sqrt(found.evidence.local_misfit)
-    return tuple(
-        SeriesResult(
-            k.series, work.fit.areas[k], float(work.fit.sigmas[k] * misfit), float(limits.decision_threshold[i]),
-            float(limits.detection_limit[i]), float(work.fit.areas[k] + 1.645 * work.fit.sigmas[k] * misfit),
-        )
-        for i, k in enumerate(found.keys)
-    )  # fmt: skip
+    misfit = float(np.sqrt(found.evidence.local_misfit))
+    results = []
+    for i, k in enumerate(found.keys):
+        area = work.fit.areas[k]
+        sigma = float(np.hypot(work.fit.sigmas[k] * misfit, AREA_PRECISION * area))
+        threshold, limit = float(limits.decision_threshold[i]), float(limits.detection_limit[i])
+        results.append(SeriesResult(k.series, area, sigma, threshold, limit, max(area, 0.0) + K_95 * sigma))
+    return tuple(results)
 
 
 def _anode_finding(work: Work) -> Finding | None:
@@ -112,8 +116,8 @@ def _anode_finding(work: Work) -> Finding | None:
             entry = series.setdefault(column.of.split()[-1], [0.0, 0.0])
             entry[0] += float(work.fit.solution.coefficients[at])
             entry[1] += variance
-    results = tuple(SeriesResult(s, a, float(np.sqrt(v)), float(1.645 * np.sqrt(v)), float(3.29 * np.sqrt(v) + 2.71),
-                                 float(a + 1.645 * np.sqrt(v))) for s, (a, v) in series.items())  # fmt: skip
+    results = tuple(SeriesResult(s, a, float(np.sqrt(v)), float(K_95 * np.sqrt(v)), float(3.29 * np.sqrt(v) + 2.71),
+                                 float(a + K_95 * np.sqrt(v))) for s, (a, v) in series.items())  # fmt: skip
     significance = max((r.area / max(r.sigma, 1e-9) for r in results), default=0.0)
     if any(k.element == anode for k in work.fit.keys):
         return None
