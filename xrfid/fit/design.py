@@ -150,6 +150,8 @@ class ScatterColumn:
 
 
 _COMPTON_STEP_KEV = 0.01
+_UNSHIFTED_KEV = 5.0
+"""Below, the Compton shift is a small part of the width: one column does for both kinds of scatter."""
 _MULTIPLE_DECAY = 0.025
 """Mean energy lost by multiple incoherent scatter, as a share of the line's energy (common practice, no source)."""
 _GAUSSIAN_DOPPLER = 0.011
@@ -207,6 +209,8 @@ def _incoherent(of: str, rows: NDArray[np.intp], names: list[str], prediction: P
     weight = scattered.incoherent[rows] / total
     peak = scattered.incoherent_kev[rows]
     strongest = float(peak[np.argmax(weight)])
+    if strongest < _UNSHIFTED_KEV:
+        return []
     angle = prediction.instrument.geometry.scatter_deg
     low = max(0.75 * float(peak.min()) - 0.5, 0.3)
     grid = np.arange(low, 1.12 * float(peak.max()) + 0.3, _COMPTON_STEP_KEV)

@@ -226,6 +226,8 @@ def significances(ingredients: Ingredients, fit: Fit) -> dict[SeriesKey, float]:
 
 
 PEAK_WIDTHS = (1.0, 1.5)
+_LINE_MARGIN = 10.0
+"""On a fitted line, a free peak must be so many times larger than the line, else it is the line."""
 _PEAK_MARGIN = 0.05
 """A free peak must hold at least this share of the line counts around it, else it is shape misfit."""
 
@@ -265,7 +267,7 @@ def _on_a_known_line(ingredients: Ingredients, fit: Fit, peak: FreePeak, amplitu
         return True
     width = float(ingredients.columns.shape.resolution.fwhm_kev(peak.energy_kev))
     return any(
-        abs(group.energy_kev - peak.energy_kev) < 0.6 * width and amplitude < 3.0 * fit.areas[key] * group.share
+        abs(group.energy_kev - peak.energy_kev) < 0.6 * width and amplitude < _LINE_MARGIN * fit.areas[key] * group.share
         for key in fit.keys if fit.areas[key] > 30.0
         for group in ingredients.groups(key)
     )  # fmt: skip
