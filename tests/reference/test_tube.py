@@ -39,7 +39,7 @@ def test_lines_to_continuum_as_in_a_second_model(anode, kv):
 
 @pytest.mark.parametrize(("anode", "kv"), [("Rh", 40.0), ("W", 50.0), ("Mo", 30.0)])
 def test_the_continuum_follows_kramers_law(anode, kv):
-    """Kramers, Phil. Mag. 46 (1923) 836: E0/E - 1 per keV, within 25 % in the upper half, where the target absorbs little."""
+    """Kramers, Phil. Mag. 46 (1923) 836: E0/E - 1 per keV, within 25 % where the target absorbs little."""
     energy = np.linspace(0.5 * kv, 0.9 * kv, 9)
     edges = edge_energies()[ATOMIC_NUMBER[anode]]
     energy = energy[np.abs(energy[:, None] / np.maximum(edges, 0.01) - 1.0).min(axis=1) > 0.1]
