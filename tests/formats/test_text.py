@@ -50,6 +50,10 @@ SHAPES: dict[str, Shape] = {
     "ten counts a line, the last line shorter": Shape(
         lines(*("".join(f"{c:8d}" for c in COUNTS[i : i + 10]) for i in range(0, N, 10)))
     ),
+    "energies in one line, counts in the next": Shape(
+        lines(" ".join(fixed(ENERGY)), " ".join(map(str, COUNTS)), " ".join(map(str, OTHER))), SCALE,
+        spectra=(COUNTS, OTHER), names=("column 1", "column 2"),
+    ),
     # headers
     "marked sections, NAME - value": Shape(SECTIONS, SCALE, 30.5, 33.25),
     "marked sections, CRLF": Shape(SECTIONS.replace("\n", "\r\n"), SCALE, 30.5, 33.25),

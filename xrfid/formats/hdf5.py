@@ -29,6 +29,8 @@ _LINEAR_TO_CHANNELS = 0.05
 """An energy axis counts as polynomial if it is met to this share of a channel."""
 _KEV = {"kev": 1.0, "ev": 1e-3, "mev": 1e3}
 _BUILT_IN_FILTERS = {*range(1, 256), 32000}
+_DAMAGED = (OSError, RuntimeError, KeyError, ValueError, TypeError, MemoryError, OverflowError)
+"""What the library raises when a file is damaged, depending on where."""
 _FACTS = ("voltage_kv", "current_ma", "anode", "fwhm_mn_ka_ev", "start_time", "date", "time")
 
 
@@ -65,8 +67,7 @@ def read(source: Path | io.BytesIO, dataset: str | None, name: str | None = None
             return tuple(_spectrum(called, file[p], None, p if several else None) for p in found)
     except InputError:
         raise
-    except (OSError, RuntimeError, KeyError, ValueError, TypeError, MemoryError) as error:
-        # whatever the library says of a damaged file, it is the file that is wrong
+    except _DAMAGED as error:
         raise InputError(called, f"cannot be read as HDF5 ({error})", "the file is damaged or cut short") from None
 
 

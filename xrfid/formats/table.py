@@ -29,10 +29,13 @@ def write(spectra: Sequence[Spectrum], path: Path) -> None:
         for name, seconds in (("Live time (s)", first.live_time_s), ("Real time (s)", first.real_time_s)):
             if seconds is not None:
                 handle.write(f"# {name}: {float(seconds)!r}\n")
-        writer = csv.writer(handle, lineterminator="\n")
         axis = "channel" if first.scale is None else "energy (keV)"
         names = [_flat(s.dataset or s.title) or f"spectrum {i}" for i, s in enumerate(spectra, start=1)]
-        writer.writerow([axis, *(["counts"] if len(spectra) == 1 else names)])
+        # a semicolon within a name must not pass for the separator
+        plain = not any(";" in name for name in names)
+        heading = csv.writer(handle, lineterminator="\n", quoting=csv.QUOTE_MINIMAL if plain else csv.QUOTE_ALL)
+        heading.writerow([axis, *(["counts"] if len(spectra) == 1 else names)])
+        writer = csv.writer(handle, lineterminator="\n")
         x = range(first.n_channels) if first.scale is None else map(float, first.energy_kev)
         for value, *counts in zip(x, *(s.counts for s in spectra), strict=True):
             writer.writerow([repr(value), *(_count(c) for c in counts)])

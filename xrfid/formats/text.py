@@ -215,17 +215,25 @@ def _columns(table: NDArray[np.float64], header: list[str]) -> list[_Column]:
     names = header if len(header) == width else [""] * width
     if width == 1:
         return [_Column(1, "", table[:, 0], None, ())]
+    if n < FEWEST_CHANNELS and width > 4:
+        if n > 1 and axis_of(table[0]) is not None:  # a spectrum lies in a row, below its axis
+            return _columns(table.T, [])
+        return [_by_rows(table)]
     axes = [axis_of(table[:, i], names[i]) for i in range(width)]
     paired = width >= 4 and width % 2 == 0 and all(axes[::2])
     if paired and not any(axis is not None and axis.certain for axis in axes[1::2]):
         return [_column(i + 2, names[i + 1], table[:, i + 1], axes[i]) for i in range(0, width, 2)]
     leading = [i for i in range(min(2, width - 1)) if axes[i] is not None]
     if not leading and width > 4 and n * width >= FEWEST_CHANNELS and not any(names):
-        return [_Column(0, "", _without_padding(table.ravel()), None, ("counts are read row by row",))]
+        return [_by_rows(table)]
     there = [axis for axis in (axes[i] for i in leading) if axis is not None]
     energy = next((axis for axis in reversed(there) if not axis.is_channel), there[0] if there else None)
     found = [_column(i + 1, names[i], table[:, i], energy) for i in range(width) if i not in leading]
     return _spectra_among(found)
+
+
+def _by_rows(table: NDArray[np.float64]) -> _Column:
+    return _Column(0, "", _without_padding(table.ravel()), None, ("counts are read row by row",))
 
 
 def _column(number: int, name: str, counts: NDArray[np.float64], axis: Axis | None) -> _Column:
