@@ -271,6 +271,7 @@ def test_the_line_of_a_bad_count_is_named():
         (b"", "is empty"),
         (b" \n\t\n", "is empty"),
         (bytes(range(256)) * 20, "is a binary file of no known format"),
+        (b"1 " * 1_000_001, "holds a line of 2000002 characters; write one row of numbers a line"),
         (b"\x01\x02\x03\x04" * 200 + b"12\n" * 90, "is a binary file of no known format"),
     ],
 )
