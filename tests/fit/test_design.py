@@ -86,6 +86,17 @@ def test_scattered_lines_have_unit_columns_at_their_energies():
     assert sum(c.predicted for c in found.values() if "incoherent" in c.kind) > 0
 
 
+def test_no_scattered_line_is_lost_between_the_columns():
+    """Below 5 keV, where the Compton shift is a small part of the width, one column stands for both kinds."""
+    prediction = Prediction(INSTRUMENT)
+    scattered = prediction.scattered(LIGHT)
+    lines = np.arange(prediction.source.n_continuum, prediction.source.energy_kev.size)
+    inside = scattered.incoherent_kev[lines] > GROUPING.edges_kev[0]
+    expected = float((scattered.coherent[lines] + scattered.incoherent[lines])[inside].sum())
+    found = sum(c.predicted for c in scatter_columns(prediction, LIGHT, SHAPE, GROUPING))
+    assert found == pytest.approx(expected, rel=1e-3)
+
+
 def test_a_source_without_continuum_scatters_none():
     source = Prediction(Instrument.from_table({"source": {"lines_kev": [22.163]}}))
     assert not scattered_continuum(source, LIGHT, SHAPE, GROUPING).any()

@@ -195,8 +195,11 @@ def _coherent(of: str, rows: NDArray[np.intp], names: list[str], scattered: Scat
     share = np.bincount(place, weight)
     strongest = int(np.argmax(weight))
     groups = tuple((kinds[i], float(share[i]), drawn[i] / share[i]) for i in range(len(kinds)))
+    predicted = float(scattered.coherent[rows].sum())
+    if lines.energy_kev[strongest] < _UNSHIFTED_KEV:  # this column stands for both
+        predicted += float(scattered.incoherent[rows].sum())
     return ScatterColumn("coherent scatter", of, float(lines.energy_kev[strongest]), drawn.sum(axis=0),
-                         float(scattered.coherent[rows].sum()), groups,
+                         predicted, groups,
                          DrawnLines(lines.energy_kev, weight, np.zeros(weight.size, dtype=np.intp)))  # fmt: skip
 
 
