@@ -33,7 +33,6 @@ from xrfid.prepare.calibration import Calibration
 from xrfid.response.sample import LIGHT_MATRIX, composition_of
 from xrfid.response.series import SeriesKey
 
-
 AREA_PRECISION = 0.005
 """Relative uncertainty of any area: where a line's tail and shelf end is a matter of the model."""
 

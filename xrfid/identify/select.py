@@ -267,7 +267,8 @@ def _on_a_known_line(ingredients: Ingredients, fit: Fit, peak: FreePeak, amplitu
         return True
     width = float(ingredients.columns.shape.resolution.fwhm_kev(peak.energy_kev))
     return any(
-        abs(group.energy_kev - peak.energy_kev) < 0.6 * width and amplitude < _LINE_MARGIN * fit.areas[key] * group.share
+        abs(group.energy_kev - peak.energy_kev) < 0.6 * width
+        and amplitude < _LINE_MARGIN * fit.areas[key] * group.share
         for key in fit.keys if fit.areas[key] > 30.0
         for group in ingredients.groups(key)
     )  # fmt: skip
