@@ -26,7 +26,7 @@ def one(energy, weight=1.0):
 
 
 @settings(max_examples=25, deadline=None)
-@given(energy=st.floats(2.0, 30.0), noise=st.floats(30.0, 150.0), slope=st.floats(1.0, 5.0))
+@given(energy=st.floats(5.0, 30.0), noise=st.floats(30.0, 150.0), slope=st.floats(1.0, 5.0))
 def test_every_part_of_a_line_has_unit_area(energy, noise, slope):
     shape = LineShape(Resolution(noise), tail_slope=slope)
     assert draw_core(one(energy), shape.resolution, EDGES, 1).sum() == pytest.approx(1.0, abs=1e-6)
