@@ -51,7 +51,7 @@ class Reader(HTMLParser):
 
 @pytest.fixture(scope="module")
 def page():
-    from conftest import build
+    from steel import build
 
     return render_page(build())
 
